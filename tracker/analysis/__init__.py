@@ -1,0 +1,1 @@
+"""Curves to physics: laws, fits, uncertainty. No image, no file."""

@@ -1,0 +1,1 @@
+"""Results as files that people keep: tables, plots, overlay video, page."""

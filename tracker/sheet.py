@@ -418,9 +418,9 @@ def _probable_unit(key: str, value: float, bench: Bench) -> str:
         "kg": {1000: "grams"},
     }
     unit = key.rsplit("_", 1)[-1]
-    for factor, name in names.get(unit, {}).items():
-        if bench.low <= value / factor <= bench.high:
-            return f"If {name} were meant, write {value / factor:g}."
+    fits = [(name, value / factor) for factor, name in names.get(unit, {}).items() if bench.low <= value / factor <= bench.high]
+    if fits:
+        return " ".join(f"If {name} were meant, write {inside:g}." for name, inside in fits)
     for factor in (10.0, 100.0, 1000.0, 0.1, 0.01, 0.001):
         if bench.low <= value / factor <= bench.high and value != 0:
             return f"A factor of {factor:g} too {'large' if factor > 1 else 'small'}? {value / factor:g} would be possible."

@@ -1,0 +1,180 @@
+"""Where the axis lies across the line: a profile fit finer than a pixel, and what one-sided light does to it.
+
+Across the line the size of the difference from the scene is averaged along the line over about one repeat of its
+texture, so that beads do not make it wander. Its place is found by least squares against a template (the clip's
+own mean profile, made symmetric), together with a level and a slope left by a shadow beside it; the template makes
+nearly the best use of the light there is (Cramer-Rao). A lamp from one side makes one flank of the line brighter,
+and any brightness centre then lies off the axis, steadily. The edges of the silhouette do not move so: profiles of
+the whole clip are pooled by the direction of the normal, and the middle between their edges tells the offset.
+"""
+
+from dataclasses import dataclass, field
+
+import numpy as np
+from numpy.typing import NDArray
+
+__all__ = ["ProfilePool", "Template", "bar_profile", "fit_centres", "side_light_offset"]
+
+_MOST_SHIFT = 0.8  # px: the fit is linear about its start, farther than this it must start again
+_SECTORS = 24  # directions of the normal apart in the pool
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Template:
+    """The expected profile across the line on a symmetric grid of offsets.
+
+    Attributes
+    ----------
+    offset_px : (m,) array
+        Offsets from the axis.
+    height : (m,) array
+        Profile, 1 at its highest, 0 far off.
+    solve : (4, m) array
+        Least-squares solution for height, height times shift, level and slope.
+    precision : float
+        Standard deviation of the shift for unit height and unit independent noise at each offset [px].
+    """
+
+    offset_px: NDArray[np.float64]
+    height: NDArray[np.float64]
+    solve: NDArray[np.float64]
+    precision: float
+
+    @classmethod
+    def from_profile(cls, offset_px: NDArray[np.float64], height: NDArray[np.float64]) -> "Template":
+        """Symmetric template from a measured or computed profile on a symmetric grid."""
+        even = 0.5 * (height + height[::-1])
+        even = even - 0.5 * (even[0] + even[-1])
+        even = even / max(float(np.abs(even).max()), 1e-12)
+        slope = np.gradient(even, offset_px)
+        design = np.column_stack([even, -slope, np.ones_like(even), offset_px / offset_px[-1]])
+        solve = np.linalg.pinv(design)
+        precision = float(np.sqrt((solve[1] ** 2).sum()))
+        return cls(offset_px, even, solve, precision)
+
+
+def bar_profile(offset_px: NDArray[np.float64], width_px: float, blur_px: float) -> NDArray[np.float64]:
+    """A bar of the given width under Gaussian blur, of height 1 before the blur."""
+    from scipy.special import ndtr
+
+    half = width_px / 2
+    profile = ndtr((offset_px + half) / blur_px) - ndtr((offset_px - half) / blur_px)
+    return np.asarray(profile, dtype=np.float64)
+
+
+def fit_centres(
+    bands: NDArray[np.float32],
+    offset0: float,
+    start: NDArray[np.float64],
+    template: Template,
+    rounds: int = 2,
+) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]:
+    """Fit the place of the line in each section.
+
+    Parameters
+    ----------
+    bands : (n, k) float32 array
+        Averaged size of the difference, a row per section, a column per pixel across.
+    offset0 : float
+        Offset of the first column [px].
+    start : (n,) array
+        Where each section's line is believed, to about half a pixel.
+    template : Template
+    rounds : int
+        Times the fit starts again from its own answer.
+
+    Returns
+    -------
+    centre, height, misfit : (n,) arrays
+        Place [px], height [grey levels], root mean square of what the fit leaves [grey levels]. Centre is NaN where
+        the profile would reach outside the band.
+    """
+    n, k = bands.shape
+    centre = np.array(start, dtype=np.float64)
+    first, last = template.offset_px[0], template.offset_px[-1]
+    model = np.column_stack(
+        [template.height, -np.gradient(template.height, template.offset_px), np.ones_like(template.height),
+         template.offset_px / last]
+    )  # fmt: skip
+    rows = np.arange(n)[:, None]
+    for _ in range(rounds):
+        at = centre[:, None] + template.offset_px[None, :] - offset0
+        low = np.clip(np.floor(at).astype(np.intp), 0, k - 2)
+        share = (at - low).astype(np.float32)
+        profile = bands[rows, low] * (1 - share) + bands[rows, low + 1] * share
+        answer = profile @ template.solve.T
+        height = answer[:, 0]
+        shift = np.where(height > 0, answer[:, 1] / np.maximum(height, 1e-6), 0.0)
+        misfit = np.sqrt(np.mean((profile - answer @ model.T) ** 2, axis=1))
+        centre = centre + np.clip(shift, -_MOST_SHIFT, _MOST_SHIFT)
+    outside = (centre + first < offset0 - 0.5) | (centre + last > offset0 + k - 0.5)
+    centre[outside] = np.nan
+    return centre, height, misfit
+
+
+@dataclass(slots=True, eq=False)
+class ProfilePool:
+    """Mean profile by the direction of the normal, gathered over a clip; memory does not grow with it.
+
+    The normal of a section is its tangent (from rim to exit) turned by -90 degrees in the picture.
+    """
+
+    offset_px: NDArray[np.float64]
+    total: NDArray[np.float64] = field(init=False)
+    count: NDArray[np.float64] = field(init=False)
+
+    def __post_init__(self) -> None:
+        self.total = np.zeros((_SECTORS, self.offset_px.size))
+        self.count = np.zeros(_SECTORS)
+
+    def add(self, normal: NDArray[np.float64], profile: NDArray[np.float64]) -> None:
+        """Add (n, m) profiles on the pool's offsets with their (n, 2) normals."""
+        angle = np.arctan2(normal[:, 1], normal[:, 0])
+        sector = np.floor((angle + np.pi) / (2 * np.pi) * _SECTORS).astype(np.intp) % _SECTORS
+        member = (sector[None, :] == np.arange(_SECTORS)[:, None]).astype(np.float64)
+        self.total += member @ profile
+        self.count += member.sum(axis=1)
+
+    def mean(self) -> NDArray[np.float64]:
+        """(m,) mean over all directions."""
+        return np.asarray(self.total.sum(axis=0) / max(self.count.sum(), 1.0))
+
+    def along(self, direction: tuple[float, float], reach_rad: float = 0.45) -> tuple[NDArray[np.float64], float]:
+        """(m,) mean profile along a direction and how many sections it rests on."""
+        middle = (np.arange(_SECTORS) + 0.5) / _SECTORS * 2 * np.pi - np.pi
+        turned = np.arctan2(direction[1], direction[0])
+        near = np.abs((middle - turned + np.pi) % (2 * np.pi) - np.pi) <= reach_rad
+        count = float(self.count[near].sum())
+        return np.asarray(self.total[near].sum(axis=0) / max(count, 1.0)), count
+
+
+def side_light_offset(
+    offset_px: NDArray[np.float64], profile: NDArray[np.float64], level: float = 0.25
+) -> tuple[float, float]:
+    """Offset of the silhouette's middle from the place the template fit gives, and its standard uncertainty [px].
+
+    The two flanks are taken at a share `level` of their own side's height, so that a bright and a dim flank are
+    each met at their edge; the spread over several levels is the uncertainty.
+    """
+    floor = 0.5 * (np.median(profile[:3]) + np.median(profile[-3:]))
+    p = np.asarray(profile - floor)
+    top = int(np.argmax(p))
+    if p[top] <= 0 or top in (0, p.size - 1):
+        return 0.0, 0.3
+    middles = []
+    for share in (level * 0.6, level, level * 1.5):
+        left = _crossing(offset_px[: top + 1][::-1], p[: top + 1][::-1], share * p[top])
+        right = _crossing(offset_px[top:], p[top:], share * p[top])
+        middles.append(0.5 * (left + right))
+    return float(middles[1]), float(max(np.ptp(middles), 0.05))
+
+
+def _crossing(offset: NDArray[np.float64], falling: NDArray[np.float64], value: float) -> float:
+    below = np.nonzero(falling < value)[0]
+    if below.size == 0:
+        return float(offset[-1])
+    i = int(below[0])
+    if i == 0:
+        return float(offset[0])
+    share = (falling[i - 1] - value) / max(falling[i - 1] - falling[i], 1e-9)
+    return float(offset[i - 1] + share * (offset[i] - offset[i - 1]))

@@ -16,7 +16,7 @@ down (the world's -z), and away from the camera. The board's axes are those of t
 """
 
 import hashlib
-from collections.abc import Iterable
+from collections.abc import Sequence
 from dataclasses import dataclass, field
 from typing import Literal
 
@@ -425,9 +425,36 @@ def _seen(theta: Floats, points_m: Floats) -> Floats:
     return _pixels(theta, space[:, :2] / space[:, 2:])
 
 
+def _seen_slope(theta: Floats, points_m: Floats) -> Floats:
+    """(n, 2, 22), change of `_seen` with each parameter."""
+    fx, fy, cx, cy, k = _inner(theta)
+    scale = float(np.exp(theta[AT["log_square"]]))
+    board = np.c_[scale * points_m, np.zeros(len(points_m))]
+    _, jacobian = cv2.projectPoints(board, theta[TURN], theta[PLACE], np.array([[fx, 0, cx], [0, fy, cy], [0, 0, 1.0]]), k)
+    jacobian = jacobian.reshape(len(board), 2, -1)  # turn, place, fx, fy, cx, cy, k1, k2, p1, p2, k3
+    slope = np.zeros((len(board), 2, len(PARAMETERS)))
+    slope[..., 0:6] = jacobian[..., 0:6]
+    slope[..., AT["log_aspect"]] = jacobian[..., 7] * fy
+    slope[..., AT["log_focal"]] = jacobian[..., 6] * fx + jacobian[..., 7] * fy
+    slope[..., AT["cx"]: AT["k3"] + 1] = jacobian[..., 8:15]
+    slope[..., AT["log_square"]] = np.einsum("ncj,nj->nc", jacobian[..., 3:6], board @ _turned(theta[TURN]).T)
+    return slope
+
+
 def _distance(theta: Floats) -> float:
+    """Perpendicular distance of the lens to the plane of motion [m]."""
     away = _board_normal_frame(theta)[2]
     return float(away @ theta[PLACE] - theta[AT["offset"]])
+
+
+def _distance_slope(theta: Floats) -> Floats:
+    """(22,), change of `_distance` with each parameter, by central differences: it is smooth and small."""
+    slope = np.zeros(len(PARAMETERS))
+    for name in ("turn_x", "turn_y", "turn_z", "place_x", "place_y", "place_z", "offset", "lean", "yaw"):
+        step = np.zeros(len(PARAMETERS))
+        step[AT[name]] = 1e-5
+        slope[AT[name]] = (_distance(theta + step) - _distance(theta - step)) / 2e-5
+    return slope
 
 
 # --- the fit ---------------------------------------------------------------------------------------------------------
@@ -566,7 +593,7 @@ def _starts(find: BoardFind, expected: _Expected) -> list[Floats]:
     return starts
 
 
-def _solve_with(find: BoardFind, expected: _Expected, whiten: Floats, starts: Iterable[Floats]) -> _Solved:
+def _solve_with(find: BoardFind, expected: _Expected, whiten: Floats, starts: Sequence[Floats]) -> _Solved:
     free = expected.free
     rows = np.array([prior.row for prior in expected.priors])
     means = np.array([prior.row @ prior.mean for prior in expected.priors])
@@ -580,19 +607,19 @@ def _solve_with(find: BoardFind, expected: _Expected, whiten: Floats, starts: It
             told.append(np.array([(_distance(theta) - expected.distance[0]) / expected.distance[1]]))
         return np.concatenate([(whiten @ (_seen(theta, points) - corners)).T.ravel(), *told])
 
-    steps = _steps(expected)[free]
-
     def slope(part: Floats) -> Floats:
-        columns = []
-        for n, step in enumerate(steps):
-            change = np.zeros_like(part)
-            change[n] = step
-            columns.append((missing(part + change) - missing(part - change)) / (2 * step))
-        return np.stack(columns, axis=1)
+        theta = expected.start.copy()
+        theta[free] = part
+        told = [rows]
+        if expected.distance is not None:
+            told.append(_distance_slope(theta)[None] / expected.distance[1])
+        by_corners = np.einsum("nm,mcp->cnp", whiten, _seen_slope(theta, points))
+        return np.concatenate([by_corners.reshape(-1, len(theta)), *told])[:, free]
 
+    widths = 1.0 / np.sqrt((slope(starts[0][free]) ** 2).sum(axis=0)).clip(1e-12)
     minima: list[tuple[float, Floats]] = []
     for start in starts:
-        fit = optimize.least_squares(missing, start[free], jac=slope, method="lm", x_scale=steps * 100, xtol=1e-12,
+        fit = optimize.least_squares(missing, start[free], jac=slope, method="lm", x_scale=widths, xtol=1e-10,
                                      ftol=1e-12, gtol=1e-12, max_nfev=200)
         minima.append((float(2 * fit.cost), fit.x))
     minima.sort(key=lambda pair: pair[0])
@@ -614,14 +641,6 @@ def _solve_with(find: BoardFind, expected: _Expected, whiten: Floats, starts: It
             other = (second, minima[1][0] - cost)
     rest = missing(part)[: 2 * len(corners)]
     return _Solved(theta, full, cost, float(rest @ rest), other)
-
-
-def _steps(expected: _Expected) -> Floats:
-    """Steps for numerical derivatives: small against the curvature, large against rounding."""
-    steps = np.full(len(PARAMETERS), 1e-5)
-    steps[[AT["cx"], AT["cy"]]] = 1e-2
-    steps[AT["offset"]] = 1e-5
-    return steps
 
 
 def _residual_px(find: BoardFind, theta: Floats) -> float:

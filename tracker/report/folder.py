@@ -9,23 +9,30 @@ import errno
 import shutil
 import time
 import uuid
-from collections.abc import Callable, Iterable, Iterator
+from collections.abc import Callable, Iterable, Iterator, Sequence
 from pathlib import Path
 
+import cv2
 import numpy as np
 from numpy.typing import NDArray
 
 from calibration.notice import BadInput
 from tracker.progress import Progress, silent
+from tracker.report.overlay import Still, pick_stills, still, write_overlay
+from tracker.report.page import page
 from tracker.report.plain import sha256_of
+from tracker.report.plots import draw
 from tracker.report.stored import is_result_folder
 from tracker.report.tables import frames_csv, result_json, summary_csv
 from tracker.result import Result
 
-__all__ = ["Frames", "refuse_existing", "write_folder"]
+__all__ = ["Frames", "Sample", "refuse_existing", "write_folder"]
 
 Frames = Callable[[], Iterable[tuple[int, NDArray[np.uint8]]]]
 """Called once, gives number and upright grey picture of each frame in order."""
+
+Sample = Callable[[list[int]], Sequence[NDArray[np.uint8]]]
+"""Gives the upright grey pictures of frames by number, such as ``Clip.sample``."""
 
 _FULL = {errno.ENOSPC, getattr(errno, "EDQUOT", errno.ENOSPC), errno.EFBIG}
 _HELD_TRIES = 6  # a virus scanner or an open player holds a file on Windows for a moment
@@ -53,6 +60,7 @@ def write_folder(
     out: Path,
     *,
     frames: Frames | None = None,
+    sample: Sample | None = None,
     overlay: bool = True,
     progress: Progress | None = None,
     replace: bool = False,
@@ -65,7 +73,9 @@ def write_folder(
     out : Path
         The folder to make; folders above it are made too.
     frames : callable, optional
-        Gives the clip's frames for the overlay video and the stills; without it there are none.
+        Gives the clip's frames for the overlay video and the stills.
+    sample : callable, optional
+        Gives single frames by number; used for the stills where no overlay is written.
     overlay : bool
         Whether to write the overlay video, the only part that needs every frame.
     progress : callable, optional
@@ -89,7 +99,7 @@ def write_folder(
     try:
         with _said_plainly(out):
             room.mkdir(parents=True)
-            _fill(room, result, out, frames if overlay else None, progress or silent)
+            _fill(room, result, out, frames if overlay else None, sample, progress or silent)
             _move_into_place(room, out)
     finally:
         shutil.rmtree(room, ignore_errors=True)
@@ -106,13 +116,37 @@ def _refuse(out: Path, replace: bool) -> None:
     refuse_existing(out)
 
 
-def _fill(room: Path, result: Result, out: Path, frames: Frames | None, tell: Progress) -> None:
+def _fill(
+    room: Path, result: Result, out: Path, frames: Frames | None, sample: Sample | None, tell: Progress
+) -> None:  # fmt: skip
     tell("tables", 0, 0)
     _write_text(room / "frames.csv", frames_csv(result))
     _write_text(room / "summary.csv", summary_csv(result))
+    stills: tuple[Still, ...] = ()
+    if frames is not None:
+        stills = write_overlay(result, frames(), room / "overlay.mp4", tell)
+    elif sample is not None:
+        stills = _sampled_stills(result, sample)
+    tell("plots", 0, 0)
+    plots = draw(result)
+    (room / "plots").mkdir()
+    for plot in plots:
+        _write_text(room / "plots" / f"{plot.stem}.svg", plot.svg)
+        (room / "plots" / f"{plot.stem}.png").write_bytes(plot.png)
+    for one in stills:
+        (room / "plots" / f"{one.stem}.png").write_bytes(cv2.imencode(".png", one.picture)[1].tobytes())
+    tell("report", 0, 0)
+    _write_text(room / "report.html", page(result, plots, stills, has_overlay=frames is not None))
     # result.json comes last: it holds the hashes of all the others.
     hashes = {path.relative_to(room).as_posix(): sha256_of(path) or "" for path in sorted(room.rglob("*")) if path.is_file()}
     _write_text(room / "result.json", result_json(result, out, hashes))
+
+
+def _sampled_stills(result: Result, sample: Sample) -> tuple[Still, ...]:
+    picks = pick_stills(result)
+    numbers = sorted({number for number, _ in picks.values()})
+    pictures = dict(zip(numbers, sample(numbers), strict=True))
+    return tuple(still(result, stem, number, words, pictures[number]) for stem, (number, words) in picks.items())
 
 
 def _write_text(path: Path, text: str) -> None:

@@ -24,7 +24,7 @@ from tracker.report.names import quantities_of
 from tracker.report.plain import as_json, sha256_of
 from tracker.result import FRAME_COLUMNS, Prediction, Result
 
-__all__ = ["FORMAT", "FORMAT_VERSION", "LIBRARIES", "document", "frames_csv", "result_json", "safe_text", "software",
+__all__ = ["FORMAT", "FORMAT_VERSION", "LIBRARIES", "document", "flag_text", "frames_csv", "result_json", "safe_text", "software",
            "summary_csv", "summary_row", "written_at"]  # fmt: skip
 
 FORMAT = "linefall-result"
@@ -201,13 +201,14 @@ def _cells(column: Any, name: str, rows: int) -> list[str]:
     if column is None:
         return [""] * rows
     if name == "flags":
-        return [safe_text(_flags(cell)) for cell in column]
+        return [safe_text(flag_text(cell)) for cell in column]
     if name == "frame":
         return [str(int(cell)) for cell in column]
     return [_cell(float(cell)) for cell in np.asarray(column, dtype=float)]
 
 
-def _flags(cell: Any) -> str:
+def flag_text(cell: Any) -> str:
+    """Flags of one frame as words separated by spaces; the table may hold text, a list, or nothing."""
     if cell is None or (isinstance(cell, float) and math.isnan(cell)):
         return ""
     return cell if isinstance(cell, str) else " ".join(str(flag) for flag in cell)

@@ -1,158 +1,180 @@
-"""What moves: a line, bars, balls, and their shadow, drawn with motion blur and rolling shutter.
+"""What moves in one frame, drawn with motion blur and rolling shutter, and the shadow it throws on the wall.
 
-The motion is asked for at a few moments (knots) across the frame's readout, the places seen are interpolated between them by
-cubics, and each piece is drawn at the time at which its own row is exposed: t = t_frame + readout row/(rows - 1) + u, solved as
-a fixed point, for moments u spread over the exposure so closely that nothing moves more than 0.4 px between two.
+The exposure is cut into moments so close that nothing moves more than 0.4 px between two; at each moment every piece is painted
+where its own row sees it (`rolling.py`), and the moments are averaged in linear light.
 """
 
+from collections.abc import Sequence
 from dataclasses import dataclass
-from typing import Protocol
 
+import cv2
 import numpy as np
 from numpy.typing import NDArray
 
-__all__ = ["Ball", "Bars", "LineStyle", "Motion", "StrandLike"]
+from sample_clips.camera import Camera
+from sample_clips.moving import Ball, LineStyle, Motion
+from sample_clips.paint import Canvas, Shade, paint_balls, paint_beads, paint_line
+from sample_clips.pieces import Beads, Line, gather
+from sample_clips.rolling import Knots, Track, seen_by, watch
+from sample_clips.scenery import Scenery
+
+__all__ = ["Drawn", "draw"]
 
 Floats = NDArray[np.float64]
+Singles = NDArray[np.float32]
 
-
-class StrandLike(Protocol):
-    """The line at one moment.
-
-    The points go along the line no further apart than about 2 px (1.5 to 3 mm), s strictly increasing or decreasing along them;
-    the polyline is taken as it is. s is the material coordinate: the same s is the same bead at all times. The number of points
-    may differ from moment to moment (except for style "rods", where the points are the joints), but within one frame the ends must
-    stay at the same s or lie out of sight: let the line run on into the container and out of the picture's bottom.
-    """
-
-    @property
-    def points_m(self) -> Floats:
-        """(n, 3), x right, y away from the camera, z up [m]."""
-
-    @property
-    def s_m(self) -> Floats:
-        """(n,), material coordinate [m]."""
-
-    @property
-    def visible(self) -> NDArray[np.bool_]:
-        """(n,), False where the line must not be drawn. What the container, bench or board hides is found by depth anyway."""
-
-
-@dataclass(frozen=True, slots=True)
-class Ball:
-    """A sphere, such as the ball at a free end or a dropped object.
-
-    Attributes
-    ----------
-    centre_m : array of 3 floats
-        World [m].
-    radius_m : float
-        [m]
-    albedo : float
-        0 to 1.
-    specular : float
-        Strength of the highlight, in units of the lamp's light.
-    """
-
-    centre_m: Floats
-    radius_m: float
-    albedo: float = 0.1
-    specular: float = 0.3
+_STEP_PX = 0.4  # nothing moves further between two moments of the exposure
+_MOST_MOMENTS = 64
+_COARSE = 4  # pixels to a cell of the shadow's picture
 
 
 @dataclass(frozen=True, slots=True, eq=False)
-class Bars:
-    """Straight round bars with rounded ends: rods of a ladder, cords between them. The same bars in the same order at all times.
+class Drawn:
+    """What moves in one frame.
 
     Attributes
     ----------
-    a_m, b_m : (n, 3) array
-        Their ends, world [m].
-    radius_m, albedo : (n,) array
-        Radius [m], albedo.
-    specular : float
-        Strength of the highlight.
+    window : tuple of 2 slices
+        Rows and columns of the picture that the next two cover.
+    cover : (h, w) float32
+        Share of light from behind that is held up, mean over the exposure.
+    glow : (h, w) float32
+        Radiance added.
+    shade : (h/4, w/4) float32 or None
+        Share of the lamp taken from the wall, of the whole picture in cells of 4 x 4 pixels.
     """
 
-    a_m: Floats
-    b_m: Floats
-    radius_m: Floats
-    albedo: Floats
-    specular: float = 0.1
+    window: tuple[slice, slice]
+    cover: Singles
+    glow: Singles
+    shade: Singles | None
 
 
-class Motion(Protocol):
-    """What moves, at any float time t [s] of the frames' clock, also a few milliseconds before the first and after the last frame.
+def draw(
+    camera: Camera,
+    scenery: Scenery,
+    front: Singles,
+    depth_m: Singles,
+    motion: Motion,
+    style: LineStyle,
+    frame_s: float,
+    *,
+    knot_s: float = 0.001,
+) -> Drawn | None:
+    """Draw what moves in one frame.
 
-    An object may lack any of these methods; what it lacks is not drawn.
-    """
-
-    def strand(self, t: float) -> StrandLike | None:
-        """The line."""
-
-    def discs(self, t: float) -> "list[Ball] | list[tuple[Floats, float, float]]":
-        """Balls, or (centre_m, radius_m, albedo); always as many, in the same order."""
-
-    def bars(self, t: float) -> Bars | None:
-        """Bars."""
-
-
-@dataclass(frozen=True, slots=True)
-class LineStyle:
-    """What the line is made of.
-
-    Attributes
+    Parameters
     ----------
-    kind : str
-        "beads": balls at every multiple of the pitch in s, with a thin link between them. "cable": a smooth round line.
-        "rods": straight bars from point to point of the strand, with a gap at each joint.
-    radius_m : float
-        Of bead, cable or rod [m].
-    pitch_m : float
-        Of the beads [m].
-    link_radius_m : float
-        Of the wire between beads [m]; 0: none.
-    gap_m : float
-        Left free at each end of a rod [m].
-    mark_spacing_m, mark_length_m, mark_offset_m : float
-        A mark covers s from offset + k spacing, less and plus half its length [m]; spacing 0: no marks.
-    mark_radius_m : float
-        Radius of what is marked [m]; 0: as the rest.
-    albedo, mark_albedo : float
-        0 to 1.
-    specular : float
-        Strength of the highlight, in units of the lamp's light.
-    shininess : float
-        Exponent of the highlight; larger is smaller.
+    camera, scenery, style
+    front, depth_m : (h, w) float32
+        Of the still scene as this frame sees it: what is further than `depth_m` is hidden by the share `front`.
+    motion : Motion
+    frame_s : float
+        Mid-exposure of stored row 0 [s].
+    knot_s : float
+        Longest step between the times at which the motion is asked for [s].
+
+    Returns
+    -------
+    Drawn or None
+        None when nothing that moves is in the picture.
     """
+    knots = Knots.across(camera, frame_s, knot_s)
+    lines, beads, balls, outline = gather(camera, knots, motion, style)
+    tracks = [watch(camera, knots, line.points_m, line.shown) for line in lines]
+    if beads is not None:
+        tracks.append(watch(camera, knots, beads.points_m, beads.shown))
+    if balls:
+        tracks.append(watch(camera, knots, outline, np.ones(outline.shape[:2], dtype=bool)))
+    if not tracks:
+        return None
+    window, speed = _extent(camera, knots, tracks)
+    if window is None:
+        return None
+    moments = int(np.clip(np.ceil(speed * camera.exposure_s / _STEP_PX), 1, _MOST_MOMENTS))
+    canvas = Canvas(window, front, depth_m)
+    shade = Shade.of(scenery.light, camera)
+    for k in range(moments):
+        offset = camera.exposure_s * ((k + 0.5) / moments - 0.5)
+        seen = [seen_by(camera, knots, track, frame_s, offset) for track in tracks]
+        for line, at in zip(lines, seen, strict=False):
+            paint_line(canvas, line, at, camera, shade, style)
+        if beads is not None:
+            paint_beads(canvas, beads, seen[len(lines)], camera, shade, style)
+        if balls:
+            paint_balls(canvas, balls, seen[-1], shade)
+        canvas.close_moment(1 / moments)
+    cast = _cast_shadow(camera, scenery, knots, frame_s, lines, beads, balls, outline)
+    return Drawn(window, canvas.cover.astype(np.float32), canvas.glow.astype(np.float32), cast)
 
-    kind: str = "beads"
-    radius_m: float = 0.0016
-    pitch_m: float = 0.0048
-    link_radius_m: float = 0.0004
-    gap_m: float = 0.0
-    mark_spacing_m: float = 0.0
-    mark_length_m: float = 0.0
-    mark_offset_m: float = 0.0
-    mark_radius_m: float = 0.0
-    albedo: float = 0.6
-    mark_albedo: float = 0.9
-    specular: float = 0.5
-    shininess: float = 12.0
 
-    def __post_init__(self) -> None:
-        if self.kind not in ("beads", "cable", "rods"):
-            raise ValueError(f'LineStyle.kind: expected "beads", "cable" or "rods", got {self.kind!r}.')
-        if self.kind == "beads" and not self.pitch_m > 0:
-            raise ValueError(f"LineStyle.pitch_m: beads need a positive pitch, got {self.pitch_m}.")
+def _extent(camera: Camera, knots: Knots, tracks: Sequence[Track]) -> tuple[tuple[slice, slice] | None, float]:
+    """Window of the picture that the tracks cross while shown, and their largest speed in it [px/s]."""
+    low, high, speed = np.array([np.inf, np.inf]), np.array([-np.inf, -np.inf]), 0.0
+    margin = 40.0
+    for track in tracks:
+        inside = track.shown & (track.px > -margin).all(axis=-1)
+        inside &= (track.px < np.array([camera.width, camera.height]) + margin).all(axis=-1)
+        if not inside.any():
+            continue
+        low, high = np.minimum(low, track.px[inside].min(axis=0)), np.maximum(high, track.px[inside].max(axis=0))
+        moved = np.linalg.norm(np.diff(track.px, axis=0), axis=-1)[inside[1:] & inside[:-1]]
+        speed = max(speed, float(moved.max(initial=0.0)) / knots.step)
+    if not np.isfinite(low).all():
+        return None, 0.0
+    first = np.clip(np.floor(low) - margin, 0, None).astype(int)
+    last = np.clip(np.ceil(high) + margin, None, [camera.width, camera.height]).astype(int)
+    if (last <= first).any():
+        return None, 0.0
+    return (slice(first[1], last[1]), slice(first[0], last[0])), speed
 
-    def marked(self, s_m: Floats) -> NDArray[np.bool_]:
-        """Whether the line is marked at material coordinates `s_m`."""
-        if self.mark_spacing_m <= 0:
-            return np.zeros(np.shape(s_m), dtype=bool)
-        return np.abs(self.from_mark(s_m)) <= self.mark_length_m / 2
 
-    def from_mark(self, s_m: Floats) -> Floats:
-        """Signed distance from the middle of the nearest mark [m]."""
-        away: Floats = np.asarray(s_m) - self.mark_offset_m
-        return away - self.mark_spacing_m * np.round(away / self.mark_spacing_m)
+def _cast_shadow(
+    camera: Camera,
+    scenery: Scenery,
+    knots: Knots,
+    frame_s: float,
+    lines: Sequence[Line],
+    beads: Beads | None,
+    balls: Sequence[Ball],
+    outline: Floats,
+) -> Singles | None:
+    """Soft shadow on the wall at mid-exposure: each point leaves its area there, blurred by the lamp's size and its throw."""
+    towards = scenery.light.direction
+    if towards[1] >= -0.05:
+        return None
+    points = [(line.points_m, line.shown, line.area_m2) for line in lines if line.area_m2.any()]
+    if beads is not None:
+        points.append((beads.points_m, beads.shown, beads.area_m2))
+    if balls:
+        centres = outline.reshape(outline.shape[0], -1, 4, 3).mean(axis=2)
+        points.append((centres, np.ones(centres.shape[:2], dtype=bool), np.pi * np.array([b.radius_m for b in balls]) ** 2))
+    shape = (camera.height // _COARSE, camera.width // _COARSE)
+    dark, throws, per_m = np.zeros(shape, dtype=np.float32), [], camera.fx
+    for places, shown, area in points:
+        throw = (scenery.wall.y_m - places[..., 1]) / -towards[1]
+        track = watch(camera, knots, places - throw[..., None] * towards, shown)
+        seen = seen_by(camera, knots, track, frame_s, 0.0)
+        size = area * (camera.fx / seen.depth) ** 2 / _COARSE**2
+        _deposit(dark, (seen.px + 0.5) / _COARSE - 0.5, np.where(seen.shown, size, 0.0))
+        throws.append(float(throw.mean()))
+        per_m = camera.fx / float(np.median(seen.depth))
+    if not throws:
+        return None
+    spread = scenery.light.softness * max(float(np.mean(throws)), 0.0) / 2 * per_m / _COARSE
+    biggest = max([b.radius_m for b in balls], default=0.0) * per_m / _COARSE / 2  # a ball is laid down as one point
+    return np.minimum(cv2.GaussianBlur(dark, (0, 0), max(spread, biggest, 0.8)), np.float32(1))
+
+
+def _deposit(picture: Singles, px: Floats, weight: Floats) -> None:
+    """Add weights (m,) at places (m, 2), shared by the four cells around each."""
+    height, width = picture.shape
+    cell = np.floor(px)
+    part = px - cell
+    for right in (0, 1):
+        for down in (0, 1):
+            i, j = cell[:, 1].astype(np.intp) + down, cell[:, 0].astype(np.intp) + right
+            keep = (i >= 0) & (i < height) & (j >= 0) & (j < width)
+            share = weight * np.abs(1 - right - part[:, 0]) * np.abs(1 - down - part[:, 1])
+            flat = np.bincount(i[keep] * width + j[keep], share[keep], height * width)
+            picture += flat.reshape(height, width).astype(np.float32)

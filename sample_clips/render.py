@@ -8,3 +8,154 @@ and the transfer curve. Nothing here knows how the line moves: it asks a `Motion
     renderer = Renderer(camera, scenery, motion, style, frame_s=camera.frame_times(200), seed=1)
     write_clip(path, renderer.frames(), ticks, Fraction(1, 240), quarter_turns=camera.quarter_turns)
 """
+
+from collections.abc import Iterator, Sequence
+
+import cv2
+import numpy as np
+from numpy.typing import NDArray
+
+from sample_clips.camera import Camera
+from sample_clips.drawing import draw
+from sample_clips.moving import LineStyle, Motion
+from sample_clips.paint import EDGE_PX
+from sample_clips.scenery import Scenery, trace
+
+__all__ = ["Renderer"]
+
+Floats = NDArray[np.float64]
+Singles = NDArray[np.float32]
+
+_TABLE = 1 << 16  # steps of linear light in the transfer table: below 0.05 grey level each
+
+
+class Renderer:
+    """The frames a camera records of a scene.
+
+    Parameters
+    ----------
+    camera : Camera
+    scenery : Scenery
+        What stands still.
+    motion : Motion or None
+        What moves; None: nothing.
+    style : LineStyle
+        What the line is made of.
+    frame_s : sequence of float
+        Mid-exposure of stored row 0 of each frame, true time [s].
+    seed : int
+        Of the noise: frame i has the same noise whatever was rendered before it.
+    knot_s : float
+        Longest step between the times at which the motion is asked for [s].
+    """
+
+    def __init__(
+        self,
+        camera: Camera,
+        scenery: Scenery,
+        motion: Motion | None,
+        style: LineStyle | None = None,
+        *,
+        frame_s: Sequence[float] | NDArray[np.float64],
+        seed: int = 0,
+        knot_s: float = 0.001,
+    ) -> None:
+        self.camera, self.scenery, self.motion, self.style = camera, scenery, motion, style or LineStyle()
+        self.frame_s = np.asarray(frame_s, dtype=float)
+        self.seed, self.knot_s = seed, knot_s
+        self.still = trace(scenery, camera)
+        self._base = _blurred(self.still.light, camera.blur_px)
+        self._level: Singles = camera.falloff() * np.float32(camera.exposure)
+        rest = camera.blur_px**2 + 1 / 12 - EDGE_PX**2  # what the soft edges of drawn things leave of lens and pixel
+        self._rest_px = rest**0.5 if rest > 0 else 0.0
+        self._wander = _shake_fields(camera) if camera.shake is not None else None
+        self._grid = np.stack(np.meshgrid(np.arange(camera.width), np.arange(camera.height)), axis=-1).astype(np.float32)
+        self._table = camera.sensor.encode(np.arange(_TABLE) / (_TABLE - 1)).astype(np.float32)
+
+    def linear(self, frame_s: float) -> Singles:
+        """Upright linear light (h, w) on the sensor, 1 being white, of the frame that starts at `frame_s` [s]; no noise."""
+        base, direct, front, depth = self._still_at(frame_s)
+        if self.motion is not None:
+            drawn = draw(
+                self.camera, self.scenery, front, depth, self.motion, self.style, frame_s, knot_s=self.knot_s
+            )
+            if drawn is not None:
+                if drawn.shade is not None:
+                    size = (self.camera.width, self.camera.height)
+                    base = base * (1 - direct * cv2.resize(drawn.shade, size, interpolation=cv2.INTER_LINEAR))
+                change = drawn.glow - drawn.cover * base[drawn.window]
+                if self._rest_px > 0:
+                    change = _blurred(change, self._rest_px)
+                base = base.copy() if base is self._base else base
+                base[drawn.window] += change
+        light: Singles = base * self._level * self._lamp(frame_s)
+        return light
+
+    def frame(self, index: int, bits: int = 8) -> NDArray[np.uint8] | NDArray[np.uint16]:
+        """Upright frame (h, w): uint8 of 0..255, or uint16 of 0..1023 for 10 bits."""
+        light = self.linear(float(self.frame_s[index]))
+        sensor = self.camera.sensor
+        if np.isfinite(sensor.full_well_e):
+            rng = np.random.default_rng([self.seed, index])
+            sigma = np.sqrt(np.maximum(light, 0) * np.float32(sensor.full_well_e) + np.float32(sensor.read_e**2))
+            light = light + sigma * rng.standard_normal(light.shape, dtype=np.float32) / np.float32(sensor.full_well_e)
+        signal: Singles = self._table[np.clip(light * np.float32(_TABLE - 1) + np.float32(0.5), 0, _TABLE - 1).astype(np.uint16)]
+        if sensor.sharpen > 0:
+            signal = signal + np.float32(sensor.sharpen) * (signal - _blurred(signal, 1.2))
+        top = 255 if bits == 8 else 1023
+        level: Singles = np.clip(np.rint(signal * np.float32(top)), 0, top)
+        return level.astype(np.uint8) if bits == 8 else level.astype(np.uint16)
+
+    def frames(self, bits: int = 8) -> Iterator[NDArray[np.uint8] | NDArray[np.uint16]]:
+        """All frames in turn."""
+        for index in range(self.frame_s.size):
+            yield self.frame(index, bits)
+
+    def _row_times(self, frame_s: float) -> Floats:
+        """Mid-exposure [s] of each pixel's row, as (h, 1) or (1, w), whichever way the rows lie."""
+        along_columns = bool(self.camera.quarter_turns % 2)
+        places = self._grid[0, :] if along_columns else self._grid[:, 0]
+        times: Floats = frame_s + self.camera.delay(places)
+        return times[None, :] if along_columns else times[:, None]
+
+    def _lamp(self, frame_s: float) -> Singles | np.float32:
+        """Light of the lamp over each row's exposure, relative to its mean."""
+        if self.camera.flicker is None:
+            return np.float32(1)
+        return self.camera.flicker.gain(self._row_times(frame_s), self.camera.exposure_s).astype(np.float32)
+
+    def _still_at(self, frame_s: float) -> tuple[Singles, Singles, Singles, Singles]:
+        """Light, direct share, front and depth of the still scene, moved by the shake of each row's time."""
+        still = self.still
+        if self._wander is None:
+            return self._base, still.direct, still.front, still.depth_m
+        turn = self.camera.shake_angles(self._row_times(frame_s)).astype(np.float32)
+        column, row = self._grid[..., 0].copy(), self._grid[..., 1].copy()
+        for k in range(3):
+            column -= self._wander[k, 0] * turn[..., k]
+            row -= self._wander[k, 1] * turn[..., k]
+        return (
+            _moved(self._base, column, row, cv2.INTER_CUBIC),
+            _moved(still.direct, column, row, cv2.INTER_LINEAR),
+            _moved(still.front, column, row, cv2.INTER_LINEAR),
+            _moved(still.depth_m, column, row, cv2.INTER_NEAREST),
+        )
+
+
+def _blurred(picture: Singles, sigma: float) -> Singles:
+    return cv2.GaussianBlur(picture, (0, 0), sigma).astype(np.float32, copy=False)
+
+
+def _moved(picture: Singles, column: Singles, row: Singles, how: int) -> Singles:
+    return cv2.remap(picture, column, row, how, borderMode=cv2.BORDER_REPLICATE).astype(np.float32, copy=False)
+
+
+def _shake_fields(camera: Camera) -> Singles:
+    """(3, 2, h, w): how far, in columns and rows, each pixel's picture moves for a small turn about each camera axis [px/rad]."""
+    column, row = np.meshgrid(np.arange(camera.width), np.arange(camera.height))
+    px = np.stack([column, row], axis=-1).astype(float)
+    ideal = camera.undistort(px)
+    rays = np.concatenate([ideal, np.ones_like(ideal[..., :1])], axis=-1)
+    small = 1e-4
+    fields = [(camera.pixels(rays - np.cross(small * axis, rays)) - px) / small for axis in np.eye(3)]
+    return np.ascontiguousarray(np.moveaxis(np.stack(fields), -1, 1), dtype=np.float32)

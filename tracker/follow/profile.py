@@ -13,7 +13,7 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
-__all__ = ["ProfilePool", "Template", "bar_profile", "fit_centres", "side_light_offset"]
+__all__ = ["ProfilePool", "SideLight", "Template", "bar_profile", "fit_centres", "side_light", "side_light_offset"]
 
 _MOST_SHIFT = 0.8  # px: the fit is linear about its start, farther than this it must start again
 _SECTORS = 24  # directions of the normal apart in the pool
@@ -148,25 +148,80 @@ class ProfilePool:
         return np.asarray(self.total[near].sum(axis=0) / max(count, 1.0)), count
 
 
-def side_light_offset(
-    offset_px: NDArray[np.float64], profile: NDArray[np.float64], level: float = 0.25
-) -> tuple[float, float]:
-    """Offset of the silhouette's middle from the place the template fit gives, and its standard uncertainty [px].
+@dataclass(frozen=True, slots=True, eq=False)
+class SideLight:
+    """Correction for one-sided light.
 
-    The two flanks are taken at a share `level` of their own side's height, so that a bright and a dim flank are
-    each met at their edge; the spread over several levels is the uncertainty.
+    Attributes
+    ----------
+    vector_px : (2,) array
+        Its part along a normal is what has to be added to a fitted place along that normal [px].
+    u_px : float
+        Standard uncertainty of that part, common to the clip.
     """
-    floor = 0.5 * (np.median(profile[:3]) + np.median(profile[-3:]))
-    p = np.asarray(profile - floor)
-    top = int(np.argmax(p))
-    if p[top] <= 0 or top in (0, p.size - 1):
-        return 0.0, 0.3
+
+    vector_px: NDArray[np.float64]
+    u_px: float
+
+    @classmethod
+    def unknown(cls) -> "SideLight":
+        """No correction; light may have moved the axis by up to 0.7 px."""
+        return cls(np.zeros(2), 0.4)
+
+    def across(self, points: NDArray[np.floating]) -> NDArray[np.float64]:
+        """(n, 2) correction of the points of a curve, each along its own normal; NaN stays NaN."""
+        tangent = np.gradient(np.asarray(points, dtype=np.float64), axis=0)
+        size = np.hypot(tangent[:, 0], tangent[:, 1])
+        normal = np.column_stack([tangent[:, 1], -tangent[:, 0]]) / np.maximum(size, 1e-9)[:, None]
+        return np.asarray((normal @ self.vector_px)[:, None] * normal)
+
+
+def side_light(pool: ProfilePool) -> SideLight:
+    """How one-sided light moved the fitted axis of a clip, from its pooled profiles.
+
+    A lamp moves the brightness of every section towards itself, so the offset goes with the cosine between the normal and
+    the lamp: one vector is fitted to the offsets of all directions, weighed by the line that was seen in each.
+    """
+    width = 2 * np.pi / _SECTORS
+    rows = []
+    for k in range(_SECTORS):
+        angle = (k + 0.5) * width - np.pi
+        if pool.count[k] < 50:
+            continue
+        offset, u = side_light_offset(pool.offset_px, pool.total[k] / pool.count[k])
+        rows.append((np.cos(angle), np.sin(angle), offset, u, pool.count[k]))
+    if len(rows) < 3:
+        return SideLight.unknown()
+    c, s, offset, u, count = (np.array(x) for x in zip(*rows, strict=True))
+    weight = np.sqrt(count) / np.hypot(u, 0.05) ** 2
+    design = np.column_stack([c, s])
+    normal = design.T @ (weight[:, None] * design) + 1e-3 * weight.sum() * np.eye(2)
+    vector = np.linalg.solve(normal, design.T @ (weight * offset))
+    left = offset - design @ vector
+    spread = float(np.sqrt((weight * left**2).sum() / weight.sum()))
+    typical = float((weight * u).sum() / weight.sum())
+    return SideLight(vector, float(np.hypot(max(spread, typical), 0.05)))
+
+
+def side_light_offset(offset_px: NDArray[np.float64], profile: NDArray[np.float64]) -> tuple[float, float]:
+    """Middle of the silhouette against the place the template fit gives, and its standard uncertainty [px].
+
+    A glint makes a peak off the axis, but both edges of the body still differ from the scene: the middle between the two
+    outermost crossings of a low level is taken, at several levels, and their spread is the uncertainty.
+    """
+    floor = np.array([np.median(profile[:3]), np.median(profile[-3:])])
+    level = np.interp(offset_px, offset_px[[0, -1]], floor)
+    p = np.asarray(profile - level)
+    high = float(p.max())
+    if high <= 0:
+        return 0.0, 0.4
     middles = []
-    for share in (level * 0.6, level, level * 1.5):
-        left = _crossing(offset_px[: top + 1][::-1], p[: top + 1][::-1], share * p[top])
-        right = _crossing(offset_px[top:], p[top:], share * p[top])
+    for share in (0.06, 0.1, 0.15, 0.2):
+        over = np.nonzero(p >= share * high)[0]
+        left = _crossing(offset_px[: over[0] + 1][::-1], p[: over[0] + 1][::-1], share * high)
+        right = _crossing(offset_px[over[-1] :], p[over[-1] :], share * high)
         middles.append(0.5 * (left + right))
-    return float(middles[1]), float(max(np.ptp(middles), 0.05))
+    return float(np.mean(middles)), float(max(np.std(middles), 0.03))
 
 
 def _crossing(offset: NDArray[np.float64], falling: NDArray[np.float64], value: float) -> float:

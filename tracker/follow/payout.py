@@ -1,0 +1,414 @@
+"""Follow a payout, or a line drawn from a container, through a clip: arc and line speed, frame by frame.
+
+Frames stream through once. Of each there remain the axis (thinned), the arc's figures, sights of marks and one
+complex number per pitch of texture; at the end the sights become the speed at the rim, and the profiles gathered
+along the way tell by how much one-sided light had moved the axis.
+"""
+
+from collections.abc import Callable, Iterable
+from dataclasses import dataclass, field, replace
+from typing import Any, Protocol
+
+import numpy as np
+from numpy.typing import ArrayLike, NDArray
+
+from calibration.clock import Clock
+from calibration.notice import Notice
+from tracker.follow.arc import Arc, arc_length, measure_arc
+from tracker.follow.background import Background
+from tracker.follow.centreline import Centreline, LineFollower
+from tracker.follow.marks import MarkSight, MarkTrack, follow_marks, see_marks
+from tracker.follow.profile import SideLight, side_light
+from tracker.follow.speed import SpeedSeries, TextureSteps, speed_series
+from tracker.follow.texture import TexturePhases, displacement_modulo_pitch, texture_phases
+
+__all__ = ["PayoutFollow", "PayoutFrame", "follow_payout"]
+
+Floats = NDArray[np.float64]
+
+_THIN = 3  # every third point of the axis is kept
+_NODE_PX = 12  # the plane is evaluated this often along the line
+_BLURRED = 0.8  # of a pitch travelled during the exposure: the texture is as good as gone
+_NAN2 = np.full(2, np.nan)
+
+
+class _Plane(Protocol):
+    def to_metres(self, points_px: ArrayLike) -> Floats: ...
+
+
+class _Hints(Protocol):
+    origin_px: tuple[float, float]
+    pitch_m: float | None
+    mark_spacing_m: float | None
+    exposure_s: float | None
+    kind: str
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class PayoutFrame:
+    """What one frame shows.
+
+    Attributes
+    ----------
+    frame : int
+    line_px : (n, 2) float32 array
+        Axis from the rim to the exit; NaN where it was not seen. Empty where the line was lost.
+    u_line_px : (n,) float32 array
+        Standard uncertainty across the line, independent part [px].
+    apex_px, apex_m : (2,) arrays
+        Highest point of the axis in the picture, and its x and z [m]; NaN where it was not measured.
+    u_apex_m : float
+        Standard uncertainty of its z, this frame's independent part [m].
+    apex_t_s : float
+        True time at which it was seen [s].
+    width_m, radius_m, u_radius_m : float
+        Distance of the legs at half the apex's height, radius of curvature at the top [m].
+    legs_px : (2, 2) array
+        The two places of the width.
+    marks_px : (m, 2) array
+        Marks followed, in this frame.
+    flags : tuple of str
+        "line-lost", "arc-leaves-picture", "gap-at-apex", "no-arc", "blurred-texture", "speed-ambiguous".
+    """
+
+    frame: int
+    line_px: NDArray[np.float32]
+    u_line_px: NDArray[np.float32]
+    apex_px: Floats
+    apex_m: Floats
+    u_apex_m: float
+    apex_t_s: float
+    width_m: float
+    radius_m: float
+    u_radius_m: float
+    legs_px: Floats
+    marks_px: Floats
+    flags: tuple[str, ...]
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class PayoutFollow:
+    """A payout followed through a clip.
+
+    Attributes
+    ----------
+    frames : tuple of PayoutFrame
+    speed : SpeedSeries
+        Per frame, at the apex's time (where there is none, at the time the rim was seen).
+    shift_px : (2,) array
+        One-sided light had moved the axis by this vector's part across the line; it is taken out [px].
+    bias_px : float
+        Standard uncertainty of what is left of it, common to the clip, across the line [px].
+    width_px : float
+        Width of the line in the picture.
+    polarity : str
+        "lighter", "darker" or "both": against the scene behind it.
+    notices : tuple of Notice
+    """
+
+    frames: tuple[PayoutFrame, ...]
+    speed: SpeedSeries
+    shift_px: Floats
+    bias_px: float
+    width_px: float
+    polarity: str
+    notices: tuple[Notice, ...]
+
+
+@dataclass(slots=True, eq=False)
+class _Kept:
+    """What remains of one frame while the clip streams by."""
+
+    frame: int
+    arc: Arc | None = None
+    u_apex_m: float = np.nan
+    sights: list[MarkSight] = field(default_factory=list)
+    flags: list[str] = field(default_factory=list)
+    line_px: NDArray[np.float32] = field(default_factory=lambda: np.zeros((0, 2), np.float32))
+    u_line_px: NDArray[np.float32] = field(default_factory=lambda: np.zeros(0, np.float32))
+    rest_px: float = np.nan
+    lighter: float = np.nan
+
+
+def follow_payout(
+    frames: Iterable[tuple[int, NDArray[np.uint8]]],
+    background: Background,
+    plane: _Plane,
+    clock: Clock,
+    hints: _Hints,
+    shake: Any = None,
+    progress: Callable[[int], None] | None = None,
+) -> PayoutFollow:
+    """Follow a payout or a drawn line.
+
+    Parameters
+    ----------
+    frames : iterable of (index, (h, w) uint8 array)
+        Upright luma frames in order.
+    background : Background
+    plane : Plane
+    clock : Clock
+    hints : LineHints
+        Datum, pitch, mark spacing, exposure and kind, as far as the sheet states them.
+    shake : ShakeMeter, optional
+        Its `measure(gray)` gives each frame's camera movement.
+    progress : callable, optional
+        Called with the index of each frame done.
+
+    Returns
+    -------
+    PayoutFollow
+        Always: where nothing was found all frames say so.
+    """
+    reader = _Reader(background, plane, clock, hints)
+    for index, gray in frames:
+        motion = None if shake is None else shake.measure(gray)
+        if motion is not None and not getattr(motion, "ok", True):
+            motion = None
+        reader.read(index, gray, motion)
+        if progress is not None:
+            progress(index)
+    return reader.result()
+
+
+class _Reader:
+    """Holds the follower and what is kept of the frames read so far."""
+
+    def __init__(self, background: Background, plane: _Plane, clock: Clock, hints: _Hints) -> None:
+        self.background, self.plane, self.clock, self.hints = background, plane, clock, hints
+        self.px_per_m, up = _scale_and_up(plane, hints.origin_px)
+        repeat = None if hints.pitch_m is None else hints.pitch_m * self.px_per_m
+        self.follower = LineFollower(background, tuple(hints.origin_px), repeat, up)
+        self.up = np.asarray(up)
+        self.average_px = repeat if repeat is not None else max(3.0, 0.004 * self.px_per_m)
+        self.kept: list[_Kept] = []
+        self.steps: list[tuple[float, float, float, float]] = []
+        self.last: tuple[int, TexturePhases] | None = None
+
+    def read(self, index: int, gray: NDArray[np.uint8], motion: Any) -> None:
+        kept = _Kept(index)
+        self.kept.append(kept)
+        line = self.follower.follow(index, gray, motion)
+        if line is None:
+            kept.flags.append("line-lost")
+            self.last = None
+            return
+        points = line.points_px
+        place = points if motion is None else np.asarray(motion.undo(points))
+        metres = _metres(self.plane, place)
+        self._arc(kept, line, points, place, metres, gray.shape)
+        self._along(kept, index, line, place, metres)
+        keep = points[::_THIN].astype(np.float32)
+        keep[~line.seen[::_THIN]] = np.nan
+        kept.line_px, kept.u_line_px = keep, line.u_px[::_THIN].astype(np.float32)
+        kept.rest_px = float(np.median(np.abs(line.move_px)))
+        kept.lighter = float(np.mean(line.brightness > 0))
+
+    def _arc(
+        self, kept: _Kept, line: Centreline, points: Floats, place: Floats, metres: Floats, shape: tuple[int, ...]
+    ) -> None:
+        inside = (points >= 1).all(axis=1) & (points[:, 0] <= shape[1] - 2) & (points[:, 1] <= shape[0] - 2)
+        top = int(np.argmax(metres[:, 1]))
+        if not inside[max(top - 3, 0) : top + 4].all() or (top in (0, len(points) - 1) and points[top, 1] < 6):
+            kept.flags.append("arc-leaves-picture")
+            return
+        arc = measure_arc(points, metres, line.seen, line.u_px / self.px_per_m)
+        if arc is None:
+            kept.flags.append("no-arc")
+            return
+        if arc.bridged:
+            kept.flags.append("gap-at-apex")
+        kept.arc, kept.u_apex_m = arc, arc.u_apex_m
+
+    def _along(self, kept: _Kept, index: int, line: Centreline, place: Floats, metres: Floats) -> None:
+        """Marks and texture in the coordinate along the line."""
+        points = line.points_px
+        sigma = _from_rim(metres)
+        t = self.clock.at(index, points)
+        column = np.clip(np.rint(place[:, 0]).astype(np.intp), 0, self.background.gray.shape[1] - 1)
+        row = np.clip(np.rint(place[:, 1]).astype(np.intp), 0, self.background.gray.shape[0] - 1)
+        shown = line.brightness + self.background.gray[row, column]
+        spacing = self.hints.mark_spacing_m
+        window = 0.7 * spacing * self.px_per_m if spacing else 120.0
+        where = np.arange(sigma.size)
+        for at, height, length in see_marks(shown, line.seen, self.average_px, min(window, sigma.size / 2)):
+            spot = np.array([np.interp(at, where, points[:, 0]), np.interp(at, where, points[:, 1])])
+            u = 0.3 + 2.0 * self.background.noise * np.sqrt(max(length, 1.0)) / max(abs(height), 1.0)
+            kept.sights.append(
+                MarkSight(
+                    index, at, spot, float(np.interp(at, where, sigma)), float(np.interp(at, where, t)), height,
+                    u / self.px_per_m,
+                )
+            )  # fmt: skip
+        if self.hints.pitch_m is None:
+            return
+        late = t - self.clock.frame_s[index]
+        now = texture_phases(line.brightness, sigma, late, line.seen, self.hints.pitch_m, self.average_px)
+        if self.last is not None and self.last[0] == index - 1:
+            step, u_step, mean_late = displacement_modulo_pitch(self.last[1], now, self.hints.pitch_m)
+            frame_s = self.clock.frame_s
+            self.steps.append((step, u_step, frame_s[index - 1] + mean_late, frame_s[index] + mean_late))
+        self.last = (index, now)
+
+    # at the end -----------------------------------------------------------------------------------------------------
+
+    def result(self) -> PayoutFollow:
+        kept = self.kept
+        first = kept[0].frame if kept else 0
+        frame_s = self.clock.frame_s[first : first + len(kept)] if kept else np.zeros(1)
+        at_s = np.array([self._time(k) for k in kept])
+        light = side_light(self.follower.pool) if self.follower.pool is not None else SideLight.unknown()
+        tracks = self._tracks(frame_s)
+        speed = self._speed(tracks, frame_s, at_s)
+        _scatter_of_apexes(kept, at_s)
+        marks = _marks_by_frame(tracks)
+        frames = tuple(self._frame(k, t, light, marks, speed, i) for i, (k, t) in enumerate(zip(kept, at_s, strict=True)))
+        lighter = np.nanmedian([k.lighter for k in kept]) if any(np.isfinite(k.lighter) for k in kept) else 0.5
+        polarity = "lighter" if lighter > 0.9 else "darker" if lighter < 0.1 else "both"
+        return PayoutFollow(
+            frames, speed, light.vector_px, light.u_px, self.follower.width_px, polarity, self._notices(kept, speed, tracks)
+        )
+
+    def _time(self, kept: _Kept) -> float:
+        point = self.hints.origin_px if kept.arc is None else kept.arc.apex_px
+        return float(self.clock.at(kept.frame, np.asarray(point, float)))
+
+    def _tracks(self, frame_s: Floats) -> list[MarkTrack]:
+        if len(self.kept) < 3:
+            return []
+        first = self.kept[0].frame
+        sights = [[replace(s, frame=s.frame - first) for s in k.sights] for k in self.kept]
+        return follow_marks(sights, frame_s, self.hints.mark_spacing_m)
+
+    def _speed(self, tracks: list[MarkTrack], frame_s: Floats, at_s: Floats) -> SpeedSeries:
+        texture = None
+        if self.steps and self.hints.pitch_m is not None:
+            step, u, a, b = (np.array(x) for x in zip(*self.steps, strict=True))
+            texture = TextureSteps(step, u, a, b, self.hints.pitch_m)
+        rest = [k.rest_px for k in self.kept[1:6]]
+        at_rest = len(rest) > 0 and bool(np.all(np.array(rest) < 0.1))
+        return speed_series(
+            tracks, texture, frame_s, at_s, spacing_m=self.hints.mark_spacing_m, at_rest_first=at_rest
+        )
+
+    def _frame(
+        self, kept: _Kept, t: float, light: SideLight, marks: dict[int, list[Floats]], speed: SpeedSeries, i: int
+    ) -> PayoutFrame:
+        flags = list(kept.flags)
+        v = float(speed.v_mps[i])
+        pitch, exposure = self.hints.pitch_m, self.hints.exposure_s
+        if pitch and exposure and abs(v) * exposure > _BLURRED * pitch:
+            flags.append("blurred-texture")
+        if speed.verdict[i] == "ambiguous":
+            flags.append("speed-ambiguous")
+        line = kept.line_px + light.across(kept.line_px).astype(np.float32) if len(kept.line_px) > 8 else kept.line_px
+        at = np.array(marks.get(i, [])).reshape(-1, 2)
+        arc = kept.arc
+        if arc is None:
+            return PayoutFrame(
+                kept.frame, line, kept.u_line_px, _NAN2, _NAN2, np.nan, t, np.nan, np.nan, np.nan,
+                np.full((2, 2), np.nan), at, tuple(flags),
+            )  # fmt: skip
+        up = float(light.vector_px @ self.up)
+        outward = np.sign(arc.legs_px[1, 0] - arc.legs_px[0, 0]) * np.array([1.0, 0.0])
+        wider = 0.0  # both legs are moved the same way by one lamp: the width stays
+        del outward
+        return PayoutFrame(
+            kept.frame, line, kept.u_line_px, arc.apex_px + up * self.up, arc.apex_m + [0.0, up / self.px_per_m],
+            kept.u_apex_m, t, arc.width_m + wider, arc.radius_m, arc.u_radius_m, arc.legs_px, at, tuple(flags),
+        )  # fmt: skip
+
+    def _notices(self, kept: list[_Kept], speed: SpeedSeries, tracks: list[MarkTrack]) -> tuple[Notice, ...]:
+        out = []
+        lost = [k.frame for k in kept if "line-lost" in k.flags]
+        if kept and lost:
+            out.append(
+                Notice(
+                    "line-lost", f"The line was not found in {len(lost)} of {len(kept)} frames, the first is {lost[0]}.",
+                    "These frames carry no value.", "Give the line more contrast against what is behind it.",
+                )
+            )  # fmt: skip
+        if (speed.verdict == "ambiguous").any():
+            named = ", ".join(f"{np.nanmedian(c):.2f}" for c in (speed.v_mps, *speed.candidates_mps[:3]))
+            out.append(
+                Notice(
+                    "speed-ambiguous",
+                    f"The texture repeats itself every {speed.alias_step_mps:.2f} m/s at this frame rate: the median speed may be {named} m/s.",
+                    "Line speed is not stated as sure.",
+                    "Put marks on the line some 0.3 m apart, or start the clip with the line at rest.",
+                )
+            )  # fmt: skip
+        if (speed.verdict == "none").all() and len(lost) < len(kept):
+            out.append(
+                Notice("no-speed", speed.basis, "Line speed is not measured.", "Put marks of tape on the line some 0.3 m apart.")
+            )
+        u = np.hypot(speed.u_mark_ratio, 0.005)
+        if np.isfinite(speed.mark_ratio) and abs(speed.mark_ratio - 1) > 3 * u:
+            out.append(
+                Notice(
+                    "marks-against-scale",
+                    f"The marks measure {100 * (speed.mark_ratio - 1):+.2f} % of their stated spacing on the board's scale.",
+                    "Lengths and speeds may be out by as much.", "Check mark_spacing_m, square_m, offset_m and distance_m.",
+                )
+            )  # fmt: skip
+        return tuple(out)
+
+
+def _scale_and_up(plane: _Plane, origin_px: tuple[float, float]) -> tuple[float, tuple[float, float]]:
+    """Pixels per metre at the rim and the picture's direction against gravity there."""
+    o = np.asarray(origin_px, dtype=float)
+    at = plane.to_metres(np.array([o, o + [20.0, 0.0], o + [0.0, 20.0]]))
+    jacobian = np.column_stack([(at[1] - at[0]) / 20.0, (at[2] - at[0]) / 20.0])  # metres per pixel
+    up = np.linalg.solve(jacobian, np.array([0.0, 1.0]))
+    return float(np.hypot(*up)), tuple(up / np.hypot(*up))
+
+
+def _metres(plane: _Plane, points: Floats) -> Floats:
+    """The plane along a curve: exact every few pixels, between them by the deviation from an affine map, which is flat."""
+    n = points.shape[0]
+    nodes = np.unique(np.append(np.arange(0, n, _NODE_PX), n - 1))
+    at = plane.to_metres(points[nodes])
+    design = np.column_stack([points[nodes], np.ones(nodes.size)])
+    affine = np.linalg.lstsq(design, at, rcond=None)[0]
+    off = at - design @ affine
+    index = np.arange(n)
+    return points @ affine[:2] + affine[2] + np.column_stack([np.interp(index, nodes, off[:, 0]), np.interp(index, nodes, off[:, 1])])
+
+
+def _from_rim(metres: Floats) -> Floats:
+    """Length along the line from where it passes the rim's level; a little below 0 or above it is carried on straight."""
+    s = arc_length(metres)
+    z = metres[:, 1]
+    k = min(12, s.size - 1)
+    if z[0] > 0:
+        rise = (z[k] - z[0]) / max(s[k], 1e-9)
+        return s + (z[0] / rise if rise > 0.3 else z[0])
+    above = np.nonzero(z >= 0)[0]
+    if above.size == 0 or above[0] == 0:
+        return s
+    i = int(above[0])
+    share = -z[i - 1] / max(z[i] - z[i - 1], 1e-12)
+    return s - (s[i - 1] + share * (s[i] - s[i - 1]))
+
+
+def _scatter_of_apexes(kept: list[_Kept], at_s: Floats) -> None:
+    """Raise each frame's u to what the apexes of neighbouring frames show about a smooth course."""
+    have = np.array([i for i, k in enumerate(kept) if k.arc is not None], dtype=np.intp)
+    if have.size < 12:
+        return
+    z = np.array([kept[i].arc.apex_m[1] for i in have])  # type: ignore[union-attr]
+    third = z[3:] - 3 * z[2:-1] + 3 * z[1:-2] - z[:-3]
+    whole = (np.diff(have)[2:] == 1) & (np.diff(have)[1:-1] == 1) & (np.diff(have)[:-2] == 1)
+    if whole.sum() < 8:
+        return
+    scatter = 1.4826 * float(np.median(np.abs(third[whole]))) / np.sqrt(20.0)  # 1 + 9 + 9 + 1
+    for i in have:
+        kept[i].u_apex_m = max(kept[i].u_apex_m, scatter)
+
+
+def _marks_by_frame(tracks: list[MarkTrack]) -> dict[int, list[Floats]]:
+    out: dict[int, list[Floats]] = {}
+    for track in tracks:
+        for s in track.sights:
+            out.setdefault(s.frame, []).append(s.place_px)
+    return out

@@ -160,7 +160,8 @@ def find_board(gray: Gray, spec: BoardSpec, *, only_one: bool = True) -> BoardFi
             f"The board's squares are {square_px:.1f} px in the picture; {SMALLEST_SQUARE_PX:.0f} px is the least.",
             "Go nearer, zoom in, or print larger squares.", "board-too-small")
     pixels = _refine(gray, pixels, cells, gap)
-    find = _judge(*_as_the_picture_sees(pixels, cells), spec, partial)
+    pixels, cells, dropped = _without_outliers(*_as_the_picture_sees(pixels, cells))
+    find = _judge(pixels, cells, spec, partial or dropped > 0)
     if only_one and spec.kind == "checkerboard":
         _refuse_second(gray, find, spec)
     return find
@@ -325,13 +326,13 @@ def _cells(across: int, high: int) -> NDArray[np.int_]:
     return np.stack([columns.ravel(), rows.ravel()], axis=1)
 
 
-def _views(gray: Gray) -> list[tuple[str, Gray, float, float]]:
-    """Pictures to search in, quickest first: (name, picture, enlargement, top row of the cut-out)."""
-    local = cv2.createCLAHE(clipLimit=4.0, tileGridSize=(8, 8)).apply(gray)  # a board half in shadow
-    views = [("half", _resized(gray, 0.5), 0.5, 0.0)] if min(gray.shape) > 700 else []
-    views += [("whole", gray, 1.0, 0.0), ("evened", cast(Gray, local), 1.0, 0.0)]
+def _views(gray: Gray) -> list[tuple[Gray, float]]:
+    """Pictures to search in, quickest first, each with its enlargement."""
+    even = cv2.createCLAHE(clipLimit=4.0, tileGridSize=(8, 8)).apply(gray)  # a board half in shadow
+    views = [(_resized(gray, 0.5), 0.5)] if min(gray.shape) > 700 else []
+    views += [(gray, 1.0), (cast(Gray, even), 1.0)]
     if max(gray.shape) <= 2000:
-        views.append(("enlarged", _resized(gray, 2.0), 2.0, 0.0))
+        views.append((_resized(gray, 2.0), 2.0))
     return views
 
 
@@ -343,22 +344,21 @@ def _resized(gray: Gray, factor: float) -> Gray:
 def _search_checkerboard(gray: Gray, spec: BoardSpec) -> tuple[Points, NDArray[np.int_], bool]:
     """Corners and their cells, in the finder's own posture; True where a part of the board is hidden."""
     size = spec.inner_corners
-    plain = cv2.CALIB_CB_ADAPTIVE_THRESH | cv2.CALIB_CB_NORMALIZE_IMAGE
-    sectors = cv2.CALIB_CB_NORMALIZE_IMAGE | cv2.CALIB_CB_EXHAUSTIVE
+    plain = cv2.CALIB_CB_ADAPTIVE_THRESH | cv2.CALIB_CB_NORMALIZE_IMAGE | cv2.CALIB_CB_FAST_CHECK
     found, corners = cv2.findChessboardCorners(gray, size, flags=plain)  # milliseconds, where it works
     if found and _is_board(_unscaled(corners, 1.0), _cells(*size), 0.15):
         return _unscaled(corners, 1.0), _cells(*size), False
     views = _views(gray)
-    for _, picture, factor, _ in views:
-        found, corners = cv2.findChessboardCornersSB(picture, size, flags=sectors)
+    quick, thorough = cv2.CALIB_CB_NORMALIZE_IMAGE, cv2.CALIB_CB_NORMALIZE_IMAGE | cv2.CALIB_CB_EXHAUSTIVE
+    tries = [(picture, factor, flags) for flags in (quick, thorough) for picture, factor in views if factor <= 1]
+    tries += [(picture, factor, quick) for picture, factor in views if factor > 1]
+    for picture, factor, flags in tries:
+        found, corners = cv2.findChessboardCornersSB(picture, size, flags=flags)
         if found and _is_board(pixels := _unscaled(corners, factor), _cells(*size), 0.15):
             return pixels, _cells(*size), False
-    best: tuple[Points, NDArray[np.int_]] | None = None
-    for _, picture, factor, _ in views:
-        for corners, cells in _partial_boards(picture):
-            pixels = _unscaled(corners, factor)
-            if _is_board(pixels, cells, 0.15) and (best is None or len(pixels) > len(best[0])):
-                best = (pixels, cells)
+    best = None
+    for picture, factor in views:
+        best = best or _largest_part(picture, factor)
     wanted = f"{size[0]} x {size[1]}"
     if best is not None:
         across, high = np.ptp(best[1], axis=0) + 1
@@ -375,16 +375,18 @@ def _search_checkerboard(gray: Gray, spec: BoardSpec) -> tuple[Points, NDArray[n
         "sharp, evenly lit, squares of 12 px or more, tilted by less than 40 degrees.", "board-not-found")
 
 
-def _partial_boards(picture: Gray) -> list[tuple[Points, NDArray[np.int_]]]:
-    """The largest grids that grow from a small seed: a board that is partly hidden, or of another size."""
-    boards = []
-    for seed, flags in (((4, 4), cv2.CALIB_CB_EXHAUSTIVE), ((3, 3), 0), ((3, 3), cv2.CALIB_CB_EXHAUSTIVE)):
+def _largest_part(picture: Gray, factor: float) -> tuple[Points, NDArray[np.int_]] | None:
+    """The largest grid that grows from a small seed: a board that is partly hidden, or of another size."""
+    best = None
+    for seed in ((4, 4), (3, 3)):
         found, corners, meta = cv2.findChessboardCornersSBWithMeta(
-            picture, seed, flags=cv2.CALIB_CB_NORMALIZE_IMAGE | cv2.CALIB_CB_LARGER | flags)
+            picture, seed, flags=cv2.CALIB_CB_NORMALIZE_IMAGE | cv2.CALIB_CB_EXHAUSTIVE | cv2.CALIB_CB_LARGER)
         if found:
             high, across = meta.shape[:2]
-            boards.append((corners.reshape(-1, 2).astype(float), _cells(across, high)))
-    return boards
+            pixels, cells = _unscaled(corners, factor), _cells(across, high)
+            if _is_board(pixels, cells, 0.15) and (best is None or len(pixels) > len(best[0])):
+                best = (pixels, cells)
+    return best
 
 
 def _search_charuco(gray: Gray, spec: BoardSpec) -> tuple[Points, NDArray[np.int_]]:
@@ -528,6 +530,32 @@ def _roughness(pixels: Points, cells: NDArray[np.int_]) -> tuple[float, float]:
     return float(np.sqrt((rough**2).sum() / (2 * n - 20))), plain
 
 
+def _rest(pixels: Points, cells: NDArray[np.int_], good: NDArray[np.bool_]) -> Points:
+    """(n, 2), what is left of all corners beside a smooth map fitted to the good ones [px]."""
+    matrix = _homography(cells[good], pixels[good])
+    if matrix is None:
+        return np.zeros_like(pixels)
+    rest = pixels - cv2.perspectiveTransform(cells[None].astype(float), matrix)[0]
+    u, v = (_centred(cells) / np.abs(_centred(cells)).max(axis=0).clip(1)).T
+    basis = np.stack([np.ones_like(u), u, v, u * u, u * v, v * v], axis=1)
+    return np.asarray(rest - basis @ np.linalg.lstsq(basis[good], rest[good], rcond=None)[0], dtype=float)
+
+
+def _without_outliers(pixels: Points, cells: NDArray[np.int_]) -> tuple[Points, NDArray[np.int_], int]:
+    """Leave out corners that something in front of the board has dragged away: at most a quarter of them."""
+    good = np.ones(len(pixels), dtype=bool)
+    if len(pixels) < 16:
+        return pixels, cells, 0
+    for _ in range(6):
+        size = np.hypot(*_rest(pixels, cells, good).T)
+        limit = max(5.0 * float(np.median(size[good])) / 1.1774, 0.15)
+        kept = size < limit
+        if (kept == good).all() or kept.sum() < 0.75 * len(pixels):
+            break
+        good = kept
+    return pixels[good], cells[good], int((~good).sum())
+
+
 def _judge(pixels: Points, cells: NDArray[np.int_], spec: BoardSpec, partial: bool) -> BoardFind:
     """Make the find, with its own uncertainty and what has to be said about it."""
     square_px = _square_px(pixels, cells)
@@ -542,9 +570,8 @@ def _judge(pixels: Points, cells: NDArray[np.int_], spec: BoardSpec, partial: bo
                               f"Its corners are good to {max(rough, U_CORNER_FLOOR_PX):.2f} px.",
                               "Go nearer, zoom in, or print larger squares."))
     if partial:
-        across, high = np.ptp(cells, axis=0) + 1
-        notices.append(Notice("board-partly-hidden", f"Only {len(pixels)} inner corners ({across} x {high}) of the "
-                              f"{spec.inner_corners[0]} x {spec.inner_corners[1]} board were found.",
+        notices.append(Notice("board-partly-hidden", f"Only {len(pixels)} inner corners of the "
+                              f"{spec.inner_corners[0]} x {spec.inner_corners[1]} board were found clear.",
                               "The scale is from those.", "Keep the board clear of the line, the rig and the edge."))
     return BoardFind(pixels, cells, _centred(cells) * spec.square_m, max(rough, U_CORNER_FLOOR_PX), tuple(notices),
                      False, 1, square_px)
@@ -572,10 +599,10 @@ def _refuse_second(gray: Gray, find: BoardFind, spec: BoardSpec) -> None:
     across, high = find.shape
     wider = middle + (hull - middle) * (1 + 3.0 / min(across, high))
     cv2.fillConvexPoly(rest, np.round(wider).astype(np.int32), int(np.median(gray)))
-    flags = cv2.CALIB_CB_ADAPTIVE_THRESH | cv2.CALIB_CB_NORMALIZE_IMAGE | cv2.CALIB_CB_FAST_CHECK
-    found, corners = cv2.findChessboardCorners(rest, spec.inner_corners, flags=flags)
-    if found and _is_board(_unscaled(corners, 1.0), _cells(*spec.inner_corners), 0.15):
-        first, second = middle, corners.reshape(-1, 2).mean(axis=0)
+    factor = 1.0 if find.square_px < 20 else 0.5  # quick: a board too small for this is no rival
+    found, corners = cv2.findChessboardCornersSB(_resized(rest, factor), spec.inner_corners, flags=cv2.CALIB_CB_NORMALIZE_IMAGE)
+    if found and _is_board(pixels := _unscaled(corners, factor), _cells(*spec.inner_corners), 0.15):
+        first, second = middle, pixels.mean(axis=0)
         raise CannotMeasure(
             f"There are two boards with {spec.inner_corners[0]} x {spec.inner_corners[1]} inner corners, at column "
             f"{first[0]:.0f}, row {first[1]:.0f} and at column {second[0]:.0f}, row {second[1]:.0f}.",

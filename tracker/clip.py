@@ -5,7 +5,8 @@ that an edit list hides are left out, what is left is put in display order, and 
 their base; seconds are made in `calibration.clock`. One picture is decoded for size, orientation and range. A pass
 over the frames decodes in a thread of its own that runs a few pictures ahead, and every decoded picture finds its
 index by its stamp, never by counting. So a picture that does not decode leaves a hole in the indices and shifts
-nothing.
+nothing. Sampling a clip that has few key frames decodes most of it; those pictures then wait on disk (`spool.py`) for
+the pass that follows.
 
 Luma is plane 0 of the decoded picture, coded light Y', brought from limited or full range of any bit depth to
 0..255. It is never tone-mapped: a transfer tag (HLG, PQ) is reported and otherwise left alone.
@@ -16,7 +17,8 @@ import math
 import queue
 import threading
 from bisect import bisect_right
-from collections.abc import Iterator, Sequence
+from collections.abc import Callable, Generator, Iterable, Iterator, Sequence
+from contextlib import closing
 from dataclasses import dataclass
 from fractions import Fraction
 from itertools import pairwise
@@ -34,6 +36,7 @@ from av.video.stream import VideoStream
 from numpy.typing import NDArray
 
 from calibration.notice import BadInput, CannotMeasure, Notice
+from tracker.spool import Spool
 
 __all__ = ["Clip", "orientation", "to_full_scale", "turned_upright"]
 
@@ -95,13 +98,13 @@ class Clip:
         self._late: dict[str, Notice] = {}
         self._missing: set[int] = set()
         self._doubtful: set[int] = set()
+        self._spool: Spool | None = None
+        self._spooled = 0  # frames before this one are in the spool, or do not decode
         with _open(self.path) as container:
             chosen, said = _choose(container, self.path, stream)
             self.stream = chosen.index
             self.tag_fps, tag_said = _capture_tag(container, chosen, self.path.name)
-            self._index = _read_index(container, chosen, self.path)
-        with _open(self.path) as container:
-            self._look = _look_at_first(container, self.stream, self.path)
+            self._index, self._look = _read_through(container, chosen, self.path)
         self._opening = (*said, *tag_said, *self._index.notices, *self._look.notices)
 
     @property
@@ -177,7 +180,16 @@ class Clip:
     def __exit__(
         self, kind: type[BaseException] | None, fault: BaseException | None, trace: TracebackType | None
     ) -> None:
-        """Nothing stays open between calls; a pass that is left early ends its own thread."""
+        self.close()
+
+    def close(self) -> None:
+        """Give back what sampling kept on disk. The clip may still be read."""
+        spool, self._spool, self._spooled = self._spool, None, 0
+        if spool is not None:
+            spool.close()
+
+    def __getstate__(self) -> dict[str, Any]:
+        return {**self.__dict__, "_spool": None, "_spooled": 0}
 
     def sha256(self) -> str:
         """SHA-256 of the whole file, in hexadecimal digits."""
@@ -250,10 +262,14 @@ class Clip:
         if wanted and not 0 <= wanted[0] <= wanted[-1] < self.frame_count:
             raise ValueError(f"indices: expected 0 to {self.frame_count - 1}, got {wanted[0]} to {wanted[-1]}.")
         found: dict[int, Gray] = {}
+        if self._spool is None and wanted and self._worth_spooling(wanted):
+            self._fill_spool(wanted[-1] + 1)
+        if wanted and wanted[-1] < self._spooled:
+            found = dict(self._kept(wanted))
+            return [found[int(i)] for i in indices if int(i) in found]
         with _Reader(self) as reader:
             for group in self._index.groups(wanted):
-                for i, frame in reader.run(group[0], group[-1] + 1, frozenset(group)):
-                    found[i] = self._look.gray(frame)
+                found.update((i, gray) for i, gray in reader.run(group[0], group[-1] + 1, frozenset(group)))
         return [found[int(i)] for i in indices if int(i) in found]
 
     def _checked_range(self, start: int, stop: int | None) -> int:
@@ -266,9 +282,35 @@ class Clip:
         return max(2, min(16, AHEAD_BYTES // (self.width * self.height)))
 
     def _upright(self, start: int, stop: int) -> Iterator[tuple[int, Gray]]:
-        with _Reader(self) as reader:
-            for i, frame in reader.run(start, stop):
-                yield i, self._look.gray(frame)
+        kept = min(stop, self._spooled)
+        yield from self._kept(range(start, kept))
+        if (start := max(start, kept)) < stop:
+            with _Reader(self) as reader:
+                yield from reader.run(start, stop)
+
+    def _worth_spooling(self, wanted: list[int]) -> bool:
+        """Whether reaching these frames decodes half the clip or more, and the disk has room for it."""
+        key_places = [-1 if (key := self._index.key_before(i)) < 0 else self._index.key_ticks[key] for i in wanted]
+        last_of_key = dict(zip(key_places, wanted, strict=True))
+        decoded = sum(
+            last + 1 - (int(np.searchsorted(self.ticks, key)) if key != -1 else 0) for key, last in last_of_key.items()
+        )
+        return decoded >= self.frame_count / 2 and Spool.fits(wanted[-1] + 1, (self.height, self.width))
+
+    def _fill_spool(self, stop: int) -> None:
+        spool = Spool((self.height, self.width))
+        with closing(_run_ahead(lambda: self._upright(0, stop), self._ahead())) as pictures:
+            for i, gray in pictures:
+                if not spool.keep(i, gray):
+                    spool.close()
+                    return
+        self._spool, self._spooled = spool, stop
+
+    def _kept(self, indices: Iterable[int]) -> Iterator[tuple[int, Gray]]:
+        for i in indices:
+            gray = None if self._spool is None else self._spool.get(i)
+            if gray is not None:
+                yield i, gray
 
     def _tell(self, start: int, stop: int, seen: set[int], faults: list[int | None]) -> None:
         """Note what a finished pass over [start, stop) did not see."""
@@ -404,49 +446,63 @@ class _Index:
         return runs
 
 
-def _read_index(container: InputContainer, stream: VideoStream, path: Path) -> _Index:
-    """Read all packets once, without decoding."""
+def _read_through(container: InputContainer, stream: VideoStream, path: Path) -> "tuple[_Index, _Look]":
+    """Read all packets once; decode only until the first sound picture is seen."""
     shown: list[tuple[int | None, int | None]] = []
     keys: dict[int, int] = {}
-    count = corrupt = hidden = 0
+    look: _Look | None = None
+    corrupt = hidden = 0
     broken = False
+    codec = stream.codec_context.codec.canonical_name
     try:
         for packet in container.demux(stream):
+            if look is None:
+                look = _first_look(stream, packet, path)
             if packet.size == 0:
                 continue
-            count += 1
             corrupt += packet.is_corrupt
             if packet.is_keyframe and packet.pts is not None and packet.dts is not None:
                 keys[packet.pts] = packet.dts
             if packet.is_discard:
                 hidden += 1
-            elif not _is_invisible(stream.codec_context.codec.canonical_name, packet):
+            elif not _is_invisible(codec, packet):
                 shown.append((packet.pts, packet.dts))
     except (av.FFmpegError, OSError):
         broken = True
+        look = look or _first_look(stream, None, path)
+    count = hidden + len(shown)
     if not shown:
-        if count:
+        if hidden:
             raise BadInput(f"{path.name}: shows no picture: its edit list hides all {hidden}.", "Export the clip again without cuts.")
         raise BadInput(f"{path.name}: holds a video of no pictures.", COPY_AGAIN)
+    if look is None:
+        raise CannotMeasure(f"{path.name}: the file is damaged: not one picture decodes.", COPY_AGAIN, "clip-damaged")
     ticks, by_order, said = _in_display_order(shown, path.name)
-    notices = list(said)
-    if broken or corrupt or (count < stream.frames and "mov" in container.format.name):
-        promised = f" of {stream.frames}" if count < stream.frames else ""
-        notices.append(
-            Notice(
-                "file-cut-short",
-                f"{path.name}: the file is damaged or cut short: {count}{promised} pictures are in it, {corrupt} of them in part.",
-                "What is left is measured; nothing is filled in.",
-                COPY_AGAIN,
-            )
-        )
+    if broken or corrupt or ("mov" in container.format.name and count < stream.frames):
+        said.append(_cut_short(path.name, count, stream.frames, corrupt))
     time_base = stream.time_base
     if time_base is None or time_base <= 0:
         raise CannotMeasure(f"{path.name}: holds no time base, so no time stamps.", "Record as MP4 or MOV.", "no-time-stamps")
     ticks.flags.writeable = False
     ordered = sorted(keys)
     place = {int(t): i for i, t in enumerate(ticks)}
-    return _Index(ticks, time_base, by_order, tuple(ordered), tuple(keys[k] for k in ordered), place, tuple(notices))
+    index = _Index(ticks, time_base, by_order, tuple(ordered), tuple(keys[k] for k in ordered), place, tuple(said))
+    return index, look
+
+
+def _cut_short(name: str, found: int, promised: int, in_part: int) -> Notice:
+    of = f"{found} of {promised} pictures are" if found < promised else f"{_many(found, 'picture')} can be read"
+    part = f", {in_part} of them only in part" if in_part else ""
+    return Notice(
+        "file-cut-short",
+        f"{name}: the file is damaged or cut short: {of}{' in it' if found < promised else ''}{part}.",
+        "What is left is measured; nothing is filled in.",
+        COPY_AGAIN,
+    )
+
+
+def _many(count: int, noun: str) -> str:
+    return f"{count} {noun}{'' if count == 1 else 's'}"
 
 
 def _in_display_order(
@@ -530,18 +586,24 @@ class _Look:
     luma: _Luma
     notices: tuple[Notice, ...]
 
-    def gray(self, frame: VideoFrame) -> Gray:
-        """Upright full-scale luma of a decoded picture."""
-        return turned_upright(_luma(frame, self.luma), self.quarter_turns, self.mirrored)
+    def gray(self, frame: VideoFrame, scratch: "_Scratch") -> Gray:
+        """Upright full-scale luma of a decoded picture, in memory of its own."""
+        turned = self.quarter_turns != 0 or self.mirrored
+        flat = _luma(frame, self.luma, scratch, keep=not turned)
+        return turned_upright(flat, self.quarter_turns, self.mirrored) if turned else flat
 
 
-def _look_at_first(container: InputContainer, index: int, path: Path) -> _Look:
-    """Decode up to the first sound picture."""
-    stream = container.streams[index]
-    assert isinstance(stream, VideoStream)
-    frame = next((f for f in _decoded(container, stream, [])), None)
-    if frame is None:
-        raise CannotMeasure(f"{path.name}: the file is damaged: not one picture decodes.", COPY_AGAIN, "clip-damaged")
+def _first_look(stream: VideoStream, packet: "av.Packet[VideoStream] | None", path: Path) -> _Look | None:
+    """What the first sound picture out of a packet shows, if one comes out."""
+    try:
+        frames = stream.codec_context.decode(packet)
+    except (av.FFmpegError, OSError):
+        return None
+    return next((_look_at(f, stream, path) for f in frames if not f.is_corrupt), None)
+
+
+def _look_at(frame: VideoFrame, stream: VideoStream, path: Path) -> _Look:
+    """Size, orientation, range and oddities."""
     notices: list[Notice] = []
     matrix = frame.side_data.get("DISPLAYMATRIX")
     turns, mirrored, exact = orientation(_int32(matrix)) if isinstance(matrix, Buffer) else (0, False, True)
@@ -612,7 +674,21 @@ def _is_full(frame: VideoFrame, stream: VideoStream) -> bool:
     return frame.format.name.startswith("gray") and stream.codec_context.codec.canonical_name not in broadcast
 
 
-def _luma(frame: VideoFrame, luma: _Luma) -> Gray:
+class _Scratch:
+    """Memory used again for every picture: getting it anew costs more than the work done in it."""
+
+    def __init__(self) -> None:
+        self._kept: dict[str, NDArray[Any]] = {}
+
+    def like(self, name: str, shape: tuple[int, ...], dtype: type) -> NDArray[Any]:
+        kept = self._kept.get(name)
+        if kept is None or kept.shape != shape or kept.dtype != dtype:
+            kept = self._kept[name] = np.empty(shape, dtype)
+        return kept
+
+
+def _luma(frame: VideoFrame, luma: _Luma, scratch: _Scratch, keep: bool) -> Gray:
+    """Full-scale luma as stored; unless it is to be kept, it may lie in memory that the next picture uses."""
     if luma.rgb:  # BT.601 luma, as in a JPEG's own gray
         return np.asarray(cv2.cvtColor(frame.to_ndarray(format="rgb24"), cv2.COLOR_RGB2GRAY), dtype=np.uint8)
     if not luma.plain:  # packed or big endian: to planar 8 bits of the same range
@@ -623,11 +699,23 @@ def _luma(frame: VideoFrame, luma: _Luma) -> Gray:
     samples = np.frombuffer(memoryview(plane), dtype=np.dtype("<u2") if wide else np.dtype(np.uint8))
     stride = plane.line_size // samples.itemsize  # rows are padded to the decoder's taste
     view = samples[: stride * frame.height].reshape(frame.height, stride)[:, : frame.width]
-    return to_full_scale(view, luma.bits, luma.full, luma.shift)
+    if luma.bits == 8 and luma.full:
+        plain = view.astype(np.uint8, copy=False)
+        return plain.copy() if keep else plain
+    work = scratch.like("codes", view.shape, np.uint16 if wide else np.uint8)
+    out = None if keep else scratch.like("gray", view.shape, np.uint8)
+    return to_full_scale(view, luma.bits, luma.full, luma.shift, work, out)
 
 
-def to_full_scale(codes: NDArray[Any], bits: int, full: bool, shift: int = 0) -> Gray:
-    """Luma codes to 0..255: black at 0, white at 255, clipped beyond.
+def to_full_scale(
+    codes: NDArray[Any],
+    bits: int,
+    full: bool,
+    shift: int = 0,
+    work: NDArray[Any] | None = None,
+    out: Gray | None = None,
+) -> Gray:
+    """Luma codes to 0..255: black at 0, white at 255, clipped beyond, rounded to the nearest.
 
     Parameters
     ----------
@@ -638,21 +726,21 @@ def to_full_scale(codes: NDArray[Any], bits: int, full: bool, shift: int = 0) ->
         Full range (0 to 2^bits - 1) or limited (16 to 235, times 2^(bits-8); ITU-R BT.709 and BT.2100).
     shift : int
         Unused low bits below the code.
+    work : array like `codes`, optional
+        Memory to work in.
+    out : (h, w) uint8 array, optional
+        Where to write.
 
     Returns
     -------
     (h, w) uint8 array
-        A copy of its own.
     """
     black, white = (0, 2**bits - 1) if full else (16 << bits - 8, 235 << bits - 8)
-    if bits == 8:
-        return codes.copy() if full else np.asarray(cv2.LUT(codes, _LIMITED_8))
-    native = codes.astype(np.uint16, copy=False)
-    above = cv2.subtract(native, np.array([black << shift], dtype=float)) if black else native  # saturates at 0
-    return np.asarray(cv2.convertScaleAbs(above, alpha=255.0 / (white - black << shift)), dtype=np.uint8)
-
-
-_LIMITED_8 = np.clip(np.rint((np.arange(256) - 16) * (255 / 219)), 0, 255).astype(np.uint8)
+    native: NDArray[np.integer[Any]] = codes.astype(np.uint8 if bits == 8 else np.uint16, copy=False)
+    # Two passes by vector instructions beat one look-up table. The first saturates at black, so the second's absolute
+    # value has nothing to do; it rounds and saturates at white.
+    above = cv2.subtract(native, np.array([float(black << shift)]), dst=work) if black else native
+    return np.asarray(cv2.convertScaleAbs(above, dst=out, alpha=255.0 / (white - black << shift)), dtype=np.uint8)
 
 
 def _int32(data: Buffer) -> NDArray[np.int32]:
@@ -736,7 +824,7 @@ class _Reader:
     """An open file of a clip from which ranges of frames are decoded, by seeking where that is safe."""
 
     def __init__(self, clip: Clip) -> None:
-        self._clip, self._index = clip, clip._index
+        self._clip, self._index, self._scratch = clip, clip._index, _Scratch()
         self._container, self._stream = self._fresh()
 
     def _fresh(self) -> tuple[InputContainer, VideoStream]:
@@ -756,8 +844,8 @@ class _Reader:
 
     def run(
         self, start: int, stop: int, wanted: frozenset[int] | None = None
-    ) -> Iterator[tuple[int, VideoFrame]]:
-        """Frames of [start, stop) that decode, with their indices, rising."""
+    ) -> Iterator[tuple[int, Gray]]:
+        """Frames of [start, stop) that decode, or those wanted of them, with their indices, rising."""
         key = self._index.key_before(start)
         seeks = [key] if key > 0 else []
         for at in [*seeks, None]:
@@ -779,7 +867,7 @@ class _Reader:
                 last = i
                 seen.add(i)
                 if wanted is None or i in wanted:
-                    yield i, frame
+                    yield i, self._clip._look.gray(frame, self._scratch)
                 if i == stop - 1:
                     break
             if seen or at is None:
@@ -816,7 +904,7 @@ class _Reader:
             yield i, frame
 
 
-def _run_ahead(work: Any, depth: int) -> Iterator[tuple[int, Gray]]:
+def _run_ahead(work: Callable[[], Iterator[tuple[int, Gray]]], depth: int) -> Generator[tuple[int, Gray], None, None]:
     """Run an iterator in a thread of its own, at most `depth` items ahead."""
     ready: queue.Queue[tuple[int, Gray] | BaseException | None] = queue.Queue(maxsize=depth)
     left = threading.Event()
@@ -840,7 +928,8 @@ def _run_ahead(work: Any, depth: int) -> Iterator[tuple[int, Gray]]:
         except BaseException as fault:  # told to the one who reads, whatever it is
             put(fault)
         finally:
-            items.close()
+            if isinstance(items, Generator):
+                items.close()
 
     worker = threading.Thread(target=produce, name="decode", daemon=True)
     worker.start()

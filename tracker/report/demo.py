@@ -74,7 +74,7 @@ def demo(kind: str = "payout", frames: int = 240, size: tuple[int, int] = (540, 
 
 def _payout(frames: int, size: tuple[int, int]) -> Demo:
     rng = np.random.default_rng(7)
-    bench = _Bench(size, (0.42 * size[0], 0.50 * size[1]), 0.95 * size[1])
+    bench = _Bench(size, (round(0.42 * size[0], 1), 0.50 * size[1]), 0.95 * size[1])
     t = np.arange(frames) / FPS
     growth = 1 - np.exp(-t / (0.22 * t[-1]))
     height = 0.012 + 0.205 * growth + 0.002 * np.sin(17 * t)

@@ -1,6 +1,7 @@
 """The report page: one HTML file that needs no network, prints on A4 in grey, and reads aloud."""
 
 import base64
+import json
 import math
 import re
 from collections.abc import Mapping, Sequence
@@ -66,18 +67,20 @@ def page(result: Result, plots: Sequence[Plot] = (), stills: Sequence[Still] = (
         sheet_name=result.sheet_path.name,
         sheet_sha256=sha256_of(result.sheet_path),
         stills=[_picture(one, said.label) for one in stills],
-        still_width="13rem" if portrait else "24rem",
+        shape="upright" if portrait else "lying",
         has_overlay=has_overlay,
         quantities=[_quantity(name, quantity) for name, quantity in result.quantities.items()],
         predictions=[_prediction(item) for item in result.predictions],
         warnings=result.warnings,
-        plots=[{"svg": Markup(_inline(plot))} for plot in plots],  # our own drawing, its texts escaped where it was made
+        # Our own drawings, their texts escaped where they were made.
+        plots=[{"svg": Markup(_inline(plot))} for plot in plots if plot.stem != "budget"],
+        budget_plot=next((Markup(_inline(plot)) for plot in plots if plot.stem == "budget"), ""),
         budgets=[_budget(name, quantity) for name, quantity in result.quantities.items() if quantity.budget],
         filmed=_filmed(result),
         edits=[[value_in_words(plain(edit.get(key, ""))) for key in _edit_keys(result)] for edit in result.edits],
         edit_keys=_edit_keys(result),
         defaults=[(key, _default(plain(value))) for key, value in result.defaults.items()],
-        settings=[(key, value_in_words(value)) for key, value in flat(plain(result.sheet))],
+        settings=_settings(plain(result.sheet)),
         cautions=CAUTIONS,
     )
     return html
@@ -97,7 +100,7 @@ def _minus(text: str) -> str:
 
 
 def _sentence(text: str) -> str:
-    return text[:1].upper() + text[1:]
+    return text if text[1:2] == "(" else text[:1].upper() + text[1:]  # u(offset) is not U(offset)
 
 
 def _subscript(symbol: str) -> Markup:
@@ -159,7 +162,8 @@ def _budget(name: str, quantity: Quantity) -> dict[str, Any]:
 def _budget_line(line: BudgetLine, quantity: Quantity) -> dict[str, str]:
     unit, of_result = show_unit(line.unit), show_unit(quantity.unit)
     u = compact(line.u, 2)
-    per = f"({of_result or '1'})/({unit})" if unit and unit != of_result else ""
+    above = f"({of_result})" if "/" in of_result else of_result or "1"
+    per = f"{above}/{unit}" if unit and unit != of_result else ""
     return {
         "source": line.source, "u": f"{u}{unit if unit == '°' else f' {unit}' if unit else ''}",
         "c": f"{compact(line.c, 3)} {per}".strip(), "part": part_text(line.part, "1"), "share": percent(line, quantity.u),
@@ -173,6 +177,18 @@ _SHARED = {"run": "this run only", "station": "station", "board": "board", "lens
 def _filmed(result: Result) -> list[tuple[str, list[tuple[str, str]]]]:
     tables = (("Clock: frames to seconds", result.clock), ("Plane: pixels to metres", result.plane), ("Clip", result.clip))
     return [(name, [in_words(key, value) for key, value in flat(plain(table))]) for name, table in tables if table]
+
+
+def _settings(sheet: Mapping[str, Any]) -> list[tuple[str, list[str]]]:
+    """The sheet table by table, each key as it would be written in it."""
+    tables = {name: table if isinstance(table, Mapping) else {"": table} for name, table in sheet.items()}
+    return [(name, [_setting(key, value) for key, value in flat(table) if value is not None]) for name, table in tables.items()]
+
+
+def _setting(key: str, value: Any) -> str:
+    # A string with quotes, a number with a point, a list in brackets: JSON writes these as TOML does.
+    text = json.dumps(value, ensure_ascii=False)
+    return f"{key} = {text}" if key else text
 
 
 def _edit_keys(result: Result) -> list[str]:

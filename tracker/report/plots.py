@@ -6,6 +6,7 @@ alone, without the state that pyplot keeps.
 """
 
 import io
+import re
 import textwrap
 from collections import Counter
 from collections.abc import Sequence
@@ -28,14 +29,14 @@ from tracker.result import Result
 __all__ = ["Plot", "draw"]
 
 Floats = NDArray[np.float64]
-SIZE_IN = (5.6, 4.2)
+SIZE_IN = (4.8, 3.7)
 BAND_K = 2.0
 MOST_BARS = 9
 PNG_DPI = 150
 LABEL_APART = 0.085  # of the height of a plot
 STYLE: Any = {
-    "svg.fonttype": "none", "svg.hashsalt": "linefall", "font.family": "DejaVu Sans", "font.size": 9.5,
-    "axes.titlesize": 10.5, "axes.labelsize": 9.5, "axes.spines.top": False, "axes.spines.right": False,
+    "svg.fonttype": "none", "svg.hashsalt": "linefall", "font.family": "DejaVu Sans", "font.size": 9.0,
+    "axes.titlesize": 10.5, "axes.labelsize": 9.0, "axes.spines.top": False, "axes.spines.right": False,
     "axes.linewidth": 0.8, "axes.titlelocation": "left", "axes.titlepad": 10.0, "hatch.linewidth": 0.8,
     "lines.linewidth": 1.4, "mathtext.fontset": "dejavusans", "axes.unicode_minus": True, "path.simplify": False,
     "figure.facecolor": "white", "savefig.facecolor": "white", "axes.formatter.useoffset": False,
@@ -89,7 +90,7 @@ def draw(result: Result) -> tuple[Plot, ...]:
 def _place(result: Result) -> Plot | None:
     payout = result.kind == "payout"
     column, t_column = ("apex_z_m", "t_s") if payout else ("end_z_m", "end_t_s")
-    words = "arc height above the rim $h$" if payout else "height above the datum $z$"
+    words = "arc height above the rim h" if payout else "height above datum z"
     wanted = ("arc_height_m",) if payout else (
         "effective_acceleration_mps2", "measured_gravity_mps2", "acceleration_ratio", "growth_rate_per_s",
         "friction_coefficient", "fold_coefficient", "landing_coefficient",
@@ -105,7 +106,7 @@ def _place(result: Result) -> Plot | None:
 def _speed(result: Result) -> Plot | None:
     t_column = "t_s" if result.kind in ("payout", "drawn") else "end_t_s"
     wanted = ("line_speed_mps", "peak_end_speed_mps", "speed_ripple")
-    course = _course(result, "line_speed_mps", t_column, "u_line_speed_mps", "line speed $v$", "m/s", ("_speed_mps",), wanted)
+    course = _course(result, "line_speed_mps", t_column, "u_line_speed_mps", "line speed v", "m/s", ("_speed_mps",), wanted)
     if course is None:
         return None
     return _over_time(course, "line-speed", _finding(result, wanted) or _span(course), residuals=False)
@@ -113,7 +114,7 @@ def _speed(result: Result) -> Plot | None:
 
 def _paid_out(result: Result) -> Plot | None:
     wanted = ("length_paid_out_m",)
-    course = _course(result, "paid_out_m", "t_s", "", "length paid out $s$", "m", ("_paid_out_m",), wanted)
+    course = _course(result, "paid_out_m", "t_s", "", "length paid out s", "m", ("_paid_out_m",), wanted)
     if course is None:
         return None
     return _over_time(course, "length-paid-out", _finding(result, wanted) or _span(course), residuals=False)
@@ -162,7 +163,7 @@ def _notes(course: _Course) -> str:
     if counts:
         told = ", ".join(f"{word} ({count})" for word, count in counts.most_common(2))
         notes.append(f"hollow: flagged {told}" + (" and others" if len(counts) > 2 else ""))
-    return "\n" + "; ".join(notes) if notes else ""
+    return "".join(f"\n{note}" for note in notes)
 
 
 def _numbers(table: Any, column: str) -> Floats:
@@ -178,7 +179,7 @@ def _model_name(name: str, endings: tuple[str, ...]) -> str:
 
 def _over_time(course: _Course, stem: str, finding: str, residuals: bool) -> Plot:
     base = _base(course) if residuals else None
-    figure = Figure(figsize=SIZE_IN, layout="constrained")
+    figure = Figure(figsize=SIZE_IN if base is None else (SIZE_IN[0], 1.22 * SIZE_IN[1]), layout="constrained")
     if base is None:
         upper = figure.subplots()
         last = upper
@@ -191,7 +192,7 @@ def _over_time(course: _Course, stem: str, finding: str, residuals: bool) -> Plo
     _name_ends(upper, ends)
     if base is not None:
         _residuals(last, course, *base)
-    last.set_xlabel("time after first frame $t$ / s" + _notes(course))
+    last.set_xlabel("time after first frame t / s" + _notes(course))
     _title(figure, finding)
     return _finish(figure, stem, finding, _told(course, finding, base))
 
@@ -317,8 +318,8 @@ def _path(result: Result) -> Plot | None:
     half = max(500 * across * 1.6, 1.0)
     centre = 500 * (x[both].max() + x[both].min())
     axes.set_xlim(centre - half, centre + half)
-    axes.set_xlabel("place to the right of the datum $x$ / mm")
-    axes.set_ylabel("height above the datum $z$ / m")
+    axes.set_xlabel("place to the right of the datum x / mm")
+    axes.set_ylabel("height above the datum z / m")
     thing = "apex" if payout else "end"
     finding = f"The {thing} moved over {1000 * across:.0f} mm sideways and {along:.2f} m in height"
     _title(figure, finding)
@@ -376,7 +377,9 @@ def _wrapped(text: str) -> str:
 
 
 def _title(figure: Figure, finding: str) -> None:
-    figure.suptitle(textwrap.fill(finding, 62), x=0.012, ha="left", fontsize=10.5, fontweight="bold")
+    # A number is not parted from its unit.
+    kept = re.sub(r"(?<=[\d=±]) (?=\S)|(?<=k) (?==)", "\u00a0", finding)
+    figure.suptitle(textwrap.fill(kept, 50), x=0.012, ha="left", fontsize=10.5, fontweight="bold")
 
 
 def _told(course: _Course, finding: str, base: tuple[str, Floats] | None) -> str:
@@ -384,7 +387,7 @@ def _told(course: _Course, finding: str, base: tuple[str, Floats] | None) -> str
     shown = np.isfinite(course.value)
     t, value = course.t[shown], course.value[shown]
     unit = show_unit(course.unit)
-    what = course.words.replace("$", "")
+    what = course.words
     parts = [
         f"{finding}. {what[0].upper()}{what[1:]} from {value[0]:.3g} {unit} at {t[0]:.3f} s to {value[-1]:.3g} {unit} at {t[-1]:.3f} s",
         f"between {value.min():.3g} and {value.max():.3g} {unit}",
@@ -405,7 +408,7 @@ def _count(shown: NDArray[np.bool_], flagged: NDArray[np.bool_]) -> str:
 
 def _span(course: _Course) -> str:
     """A finding where no quantity was drawn from the course."""
-    what = course.words.replace("$", "").rsplit(" ", 1)[0]
+    what = course.words.rsplit(" ", 1)[0]
     low, high = np.nanmin(course.value), np.nanmax(course.value)
     return f"{what[0].upper()}{what[1:]} between {low:.2f} and {high:.2f} {show_unit(course.unit)}".replace("-", "−")
 

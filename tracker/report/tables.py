@@ -194,7 +194,7 @@ def _version(name: str) -> str:
     try:
         return version(name)
     except PackageNotFoundError:
-        return "not installed as a package"
+        return "from source"
 
 
 def _cells(column: Any, name: str, rows: int) -> list[str]:

@@ -14,7 +14,7 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-__all__ = ["Camera", "Flicker", "Sensor", "Shake", "truth_pixels"]
+__all__ = ["Camera", "Flicker", "Sensor", "Shake", "truth_pixels", "turned"]
 
 Floats = NDArray[np.float64]
 
@@ -231,7 +231,7 @@ class Camera:
         p: Floats = (np.asarray(points_m, dtype=float) - np.asarray(self.position_m)) @ self.rotation.T
         if t_s is None or self.shake is None:
             return p
-        return p - np.cross(self.shake_angles(t_s), p)  # small turns: second order is 1e-3 px at 1 mrad
+        return turned(p, -self.shake_angles(t_s))
 
     def project(self, points_m: ArrayLike, t_s: ArrayLike | None = None) -> Floats:
         """Where world points are seen.
@@ -288,9 +288,14 @@ class Camera:
                 axis=-1,
             )
             u = u - move / det[..., None]
-            if np.nanmax(np.abs(f), initial=0.0) < 1e-9:
+            if np.nanmax(np.abs(f), initial=0.0) < 1e-9 and self._unfolded(u):
                 return u
         raise ValueError("Camera: the lens distortion has no inverse inside the picture; use smaller k1, k2, k3.")
+
+    def _unfolded(self, ideal: Floats) -> bool:
+        """Whether the radial distortion grows outwards as far as these ideal directions: then Newton found the right branch."""
+        r2 = np.linspace(0, float(np.nanmax((ideal**2).sum(axis=-1), initial=0.0)), 200)
+        return bool((1 + r2 * (3 * self.k1 + r2 * (5 * self.k2 + r2 * 7 * self.k3)) > 0).all())
 
     def rays(self, points_px: ArrayLike) -> Floats:
         """World directions (..., 3) of upright pixels, of depth 1 along the optical axis, without shake."""
@@ -328,6 +333,15 @@ class Camera:
         """The picture as stored, of an upright picture (height, width, ...)."""
         stored = np.rot90(upright, self.quarter_turns)  # counter-clockwise: the inverse of what the tag asks
         return stored[:, ::-1] if self.mirrored else stored
+
+
+def turned(vectors: Floats, angles: Floats) -> Floats:
+    """Vectors (..., 3) turned by rotation vectors (..., 3) [rad]: Rodrigues' formula."""
+    angle = np.linalg.norm(angles, axis=-1, keepdims=True)
+    axis = angles / np.maximum(angle, 1e-300)
+    along = (axis * vectors).sum(axis=-1, keepdims=True)
+    result: Floats = vectors * np.cos(angle) + np.cross(axis, vectors) * np.sin(angle) + axis * along * (1 - np.cos(angle))
+    return result
 
 
 def truth_pixels(

@@ -13,9 +13,9 @@ from numpy.typing import NDArray
 
 from sample_clips.camera import Camera
 from sample_clips.moving import Ball, LineStyle, Motion
-from sample_clips.paint import Canvas, Shade, paint_balls, paint_beads, paint_line
+from sample_clips.paint import Canvas, Shade, paint_ball, paint_beads, paint_line, sphere_outline
 from sample_clips.pieces import Beads, Line, gather
-from sample_clips.rolling import Knots, Track, seen_by, watch
+from sample_clips.rolling import Knots, Seen, Track, row_shear, seen_by, watch
 from sample_clips.scenery import Scenery
 
 __all__ = ["Drawn", "draw"]
@@ -80,12 +80,12 @@ def draw(
         None when nothing that moves is in the picture.
     """
     knots = Knots.across(camera, frame_s, knot_s)
-    lines, beads, balls, outline = gather(camera, knots, motion, style)
+    lines, beads, balls, centres = gather(camera, knots, motion, style)
     tracks = [watch(camera, knots, line.points_m, line.shown) for line in lines]
     if beads is not None:
         tracks.append(watch(camera, knots, beads.points_m, beads.shown))
     if balls:
-        tracks.append(watch(camera, knots, outline, np.ones(outline.shape[:2], dtype=bool)))
+        tracks.append(watch(camera, knots, centres, np.ones(centres.shape[:2], dtype=bool)))
     if not tracks:
         return None
     window, speed = _extent(camera, knots, tracks)
@@ -102,10 +102,29 @@ def draw(
         if beads is not None:
             paint_beads(canvas, beads, seen[len(lines)], camera, shade, style)
         if balls:
-            paint_balls(canvas, balls, seen[-1], shade)
+            _paint_seen_balls(canvas, camera, knots, balls, centres, tracks[-1], seen[-1], shade)
         canvas.close_moment(1 / moments)
-    cast = _cast_shadow(camera, scenery, knots, frame_s, lines, beads, balls, outline)
+    cast = _cast_shadow(camera, scenery, knots, frame_s, lines, beads, balls, centres)
     return Drawn(window, canvas.cover.astype(np.float32), canvas.glow.astype(np.float32), cast)
+
+
+def _paint_seen_balls(
+    canvas: Canvas,
+    camera: Camera,
+    knots: Knots,
+    balls: Sequence[Ball],
+    centres: Floats,
+    track: Track,
+    seen: Seen,
+    shade: Shade,
+) -> None:
+    """Paint each ball with the outline it has when its centre is seen, sheared by the rows' different times."""
+    places = knots.cubic(centres, seen.t)
+    drift = row_shear(camera, knots, track, seen)
+    for n, ball in enumerate(balls):
+        if seen.shown[n]:
+            beside, axes = sphere_outline(camera, places[n], ball.radius_m, float(seen.t[n]))
+            paint_ball(canvas, ball, seen.px[n] + drift[n] @ beside, drift[n] @ axes, float(seen.depth[n]), shade)
 
 
 def _extent(camera: Camera, knots: Knots, tracks: Sequence[Track]) -> tuple[tuple[slice, slice] | None, float]:
@@ -137,7 +156,7 @@ def _cast_shadow(
     lines: Sequence[Line],
     beads: Beads | None,
     balls: Sequence[Ball],
-    outline: Floats,
+    centres: Floats,
 ) -> Singles | None:
     """Soft shadow on the wall at mid-exposure: each point leaves its area there, blurred by the lamp's size and its throw."""
     towards = scenery.light.direction
@@ -147,7 +166,6 @@ def _cast_shadow(
     if beads is not None:
         points.append((beads.points_m, beads.shown, beads.area_m2))
     if balls:
-        centres = outline.reshape(outline.shape[0], -1, 4, 3).mean(axis=2)
         points.append((centres, np.ones(centres.shape[:2], dtype=bool), np.pi * np.array([b.radius_m for b in balls]) ** 2))
     shape = (camera.height // _COARSE, camera.width // _COARSE)
     dark, throws, per_m = np.zeros(shape, dtype=np.float32), [], camera.fx

@@ -1,10 +1,10 @@
 """Round things painted in linear light: cover and shading of beads, bars and balls on a canvas of one moment.
 
-Shapes have a soft edge of 0.5 px standard deviation, which stands for the pixel's own square and a part of the lens' blur: sampled
-at pixel centres such a shape keeps its place to a few thousandths of a pixel, without supersampling.
+Shapes have a soft edge, a quadratic B-spline of 0.5 px standard deviation, which stands for the pixel's own square and a part of the
+lens' blur. Sums over pixels of such a spline times 1, x or x^2 are exact wherever it lies, so that without supersampling a line keeps
+its light, its place and its width.
 """
 
-from collections.abc import Sequence
 from typing import NamedTuple
 
 import numpy as np
@@ -16,14 +16,14 @@ from sample_clips.pieces import Beads, Line
 from sample_clips.rolling import Seen
 from sample_clips.scenery import Light
 
-__all__ = ["EDGE_PX", "Canvas", "Shade", "paint_balls", "paint_beads", "paint_line"]
+__all__ = ["EDGE_PX", "Canvas", "Shade", "paint_ball", "paint_beads", "paint_line", "sphere_outline"]
 
 Floats = NDArray[np.float64]
 Singles = NDArray[np.float32]
 Flags = NDArray[np.bool_]
 
-EDGE_PX = 0.5  # standard deviation of the soft edge with which shapes are drawn: the pixel's own square and part of the lens
-_EDGE_REACH = EDGE_PX * 5**0.5  # a smooth step over plus and minus w has standard deviation w / sqrt(5)
+EDGE_PX = 0.5  # standard deviation of the soft edge with which shapes are drawn
+_EDGE_REACH = 1.5  # and its reach: those of the quadratic B-spline
 
 
 class Shade(NamedTuple):
@@ -56,15 +56,28 @@ class Shade(NamedTuple):
 
 
 def _step(x: Singles) -> Singles:
-    """Smooth step from 0 to 1 over the soft edge: how much of what lies below x."""
-    u = np.clip(x * np.float32(0.5 / _EDGE_REACH) + np.float32(0.5), 0, 1)
-    smooth: Singles = u * u * (3 - 2 * u)
+    """Integral of the quadratic B-spline up to x, from truncated cubes."""
+    away = np.abs(x)
+    outer, inner = np.maximum(np.float32(1.5) - away, 0), np.maximum(np.float32(0.5) - away, 0)
+    tail = (outer * outer * outer - 3 * inner * inner * inner) * np.float32(1 / 6)
+    smooth: Singles = np.where(x > 0, 1 - tail, tail)
     return smooth
 
 
 def _soft(radius: Singles, distance: Singles) -> Singles:
     """Cover of a round bar of this radius at this distance from its axis; exact for lines, also those thinner than a pixel."""
     cover: Singles = _step(radius - distance) - _step(-radius - distance)
+    return cover
+
+
+def _round(radius: Singles, distance: Singles) -> Singles:
+    """Cover of a disc of this radius at this distance from its centre.
+
+    A soft edge on a circle adds pi EDGE^2 to its area; the radius is drawn in by as much, and the smallest discs are drawn fainter.
+    """
+    firm2 = np.maximum(radius * radius - np.float32(EDGE_PX**2), np.float32(0.2))
+    share = np.minimum(radius * radius / (firm2 + np.float32(EDGE_PX**2)), np.float32(1))
+    cover: Singles = share * _soft(np.sqrt(firm2), distance)
     return cover
 
 
@@ -124,7 +137,7 @@ def paint_beads(canvas: Canvas, beads: Beads, seen: Seen, camera: Camera, shade:
     dx = (column - px[:, 0, None, None]).astype(np.float32)
     dy = (row - px[:, 1, None, None]).astype(np.float32)
     r = _each(radius)
-    cover = _soft(r, np.hypot(dx, dy))
+    cover = _round(r, np.hypot(dx, dy))
     light = shade.on(dx / r, dy / r, _each(beads.albedo[near]), style.specular, style.shininess)
     canvas.add(column, row, cover, light, np.broadcast_to(_each(depth), cover.shape))
 
@@ -150,11 +163,11 @@ def paint_line(canvas: Canvas, line: Line, seen: Seen, camera: Camera, shade: Sh
     if not drawn.any():
         return
     before, after = np.r_[False, line.joined[:-1]], np.r_[line.joined[1:], False]
-    at_a = np.where(before[:, None], unit + np.r_[unit[:1], unit[:-1]], 0.0)[drawn]
-    at_b = np.where(after[:, None], unit + np.r_[unit[1:], unit[-1:]], 0.0)[drawn]
+    at_a = (unit + np.r_[unit[:1], unit[:-1]])[drawn]
+    at_b = (unit + np.r_[unit[1:], unit[-1:]])[drawn]
     free_a, free_b = ~before[drawn], ~after[drawn]
 
-    a, unit, length = a[drawn], unit[drawn], length[drawn]
+    a, b, unit, length = a[drawn], b[drawn], unit[drawn], length[drawn]
     depth = (seen.depth[:-1][drawn] + seen.depth[1:][drawn]) / 2
     per_m = camera.fx / depth
     thick = max(style.mark_radius_m, 0.0) if line.s_m is not None else 0.0
@@ -163,44 +176,83 @@ def paint_line(canvas: Canvas, line: Line, seen: Seen, camera: Camera, shade: Sh
     x = (column - a[:, 0, None, None]).astype(np.float32)
     y = (row - a[:, 1, None, None]).astype(np.float32)
     ux, uy, long = _each(unit[:, 0]), _each(unit[:, 1]), _each(length)
-    past_a = x * _each(at_a[:, 0]) + y * _each(at_a[:, 1]) >= 0
-    xb, yb = x - ux * long, y - uy * long
-    past_b = xb * _each(at_b[:, 0]) + yb * _each(at_b[:, 1]) >= 0
-    mine = (past_a | free_a[:, None, None]) & (~past_b | free_b[:, None, None])
-    reached: Singles = np.clip(x * ux + y * uy, 0, long)
+    mine = (_past(column, row, a, at_a) | free_a[:, None, None]) & (~_past(column, row, b, at_b) | free_b[:, None, None])
+    along_it = x * ux + y * uy
+    reached = np.clip(along_it, 0, long).astype(np.float32)
     dx, dy = x - reached * ux, y - reached * uy
 
     radius, albedo = _each(line.radius_m[drawn] * per_m), _each(line.albedo[drawn])
     if line.s_m is not None and style.mark_spacing_m > 0:
         s0, s1 = line.s_m[:-1][drawn], line.s_m[1:][drawn]
-        away = style.from_mark((s0[:, None, None] + reached * _each((s1 - s0) / np.maximum(length, 1e-9))).astype(float))
-        inside = (style.mark_length_m / 2 - np.abs(away)) * np.median(per_m) + 0.5
+        off = style.from_mark((s0[:, None, None] + reached * _each((s1 - s0) / np.maximum(length, 1e-9))).astype(float))
+        inside = (style.mark_length_m / 2 - np.abs(off)) * np.median(per_m) + 0.5
         painted = np.clip(inside, 0, 1).astype(np.float32)
         albedo = albedo + painted * (np.float32(style.mark_albedo) - albedo)
         if style.mark_radius_m > 0:
             radius = radius + painted * (_each(style.mark_radius_m * per_m) - radius)
-    cover = np.where(mine, _soft(radius, np.hypot(dx, dy)), np.float32(0))
-    firm = np.maximum(radius, np.float32(0.3))
-    light = shade.on(dx / firm, dy / firm, albedo, line.specular, line.shininess)
+    away = np.hypot(dx, dy)
+    cover = np.where(reached == along_it, _soft(radius, away), _round(radius, away))  # round beyond an end
+    cover = np.where(mine, cover, np.float32(0))
+    firm = np.maximum(radius, np.float32(0.3))  # thinner than that, shading means nothing
+    qx, qy = (dx / firm).astype(np.float32), (dy / firm).astype(np.float32)
+    light = shade.on(qx, qy, albedo, line.specular, line.shininess)
     canvas.add(column, row, cover, light, np.broadcast_to(_each(depth), cover.shape))
 
 
-def paint_balls(canvas: Canvas, balls: Sequence[Ball], seen: Seen, shade: Shade) -> None:
-    """Spheres as the ellipses their outlines are."""
-    for n, ball in enumerate(balls):
-        four = seen.px[4 * n : 4 * n + 4]
-        centre = four.mean(axis=0)
-        if not seen.shown[4 * n] or not _holds(canvas, centre[None], 200.0)[0]:
-            continue
-        axes = np.stack([four[0] - four[1], four[2] - four[3]], axis=1) / 2  # columns: half axes in pixels
-        size = float(np.sqrt(abs(np.linalg.det(axes))))
-        column, row = _patch(centre[None], float(np.abs(axes).sum(axis=1).max()) + _EDGE_REACH)
-        offset = np.stack([column - centre[0], row - centre[1]], axis=-1)
-        q = offset @ np.linalg.inv(axes).T @ (axes / np.linalg.norm(axes, axis=0)).T
-        qx, qy = q[..., 0].astype(np.float32), q[..., 1].astype(np.float32)
-        distance = np.hypot(qx, qy) * np.float32(size)
-        cover = _soft(np.full_like(distance, size), distance)
-        albedo = np.full_like(distance, ball.albedo)
-        light = shade.on(qx, qy, albedo, ball.specular, 20.0)
-        depth = np.full_like(distance, seen.depth[4 * n : 4 * n + 4].mean())
-        canvas.add(column, row, cover, light, depth)
+def _past(column: NDArray[np.intp], row: NDArray[np.intp], joint: Floats, normal: Floats) -> Flags:
+    """Whether pixels (m, p, p) lie beyond the bisector at a joint (m, 2); the same arithmetic for both bars that meet there, so that
+    a pixel on it belongs to exactly one."""
+    level = joint[:, 0] * normal[:, 0] + joint[:, 1] * normal[:, 1]
+    beyond: Flags = column * normal[:, 0, None, None] + row * normal[:, 1, None, None] >= level[:, None, None]
+    return beyond
+
+
+def sphere_outline(camera: Camera, centre_m: Floats, radius_m: float, t_s: float) -> tuple[Floats, Floats]:
+    """Outline of a sphere in the picture of time `t_s`: an ellipse.
+
+    Returns
+    -------
+    beside : (2,) array
+        Its middle, from the picture of the sphere's centre [px]: towards the picture's edge.
+    axes : (2, 2) array
+        Its half axes, as columns [px].
+
+    Notes
+    -----
+    The cone from the lens touches the sphere in a circle. That circle's diameter through the optical axis is seen as one axis
+    of the ellipse; the diameter across it is seen as a chord a little beside the middle, shorter than the other axis.
+    """
+    lens, forward, right = np.asarray(camera.position_m), camera.rotation[2], camera.rotation[0]
+    ray = centre_m - lens
+    distance = float(np.linalg.norm(ray))
+    to_it = ray / distance
+    shrink = 1 - (radius_m / distance) ** 2
+    radial = forward - (forward @ to_it) * to_it
+    if np.linalg.norm(radial) < 1e-6:
+        radial = right - (right @ to_it) * to_it
+    radial /= np.linalg.norm(radial)
+    across = np.cross(to_it, radial)
+    middle, reach = lens + shrink * ray, radius_m * shrink**0.5
+    four = middle + reach * np.array([radial, -radial, across, -across])
+    px = camera.project(np.vstack([four, centre_m]), t_s)
+    centre = px[:2].mean(axis=0)
+    axes = np.stack([px[0] - px[1], px[2] - px[3]], axis=1) / 2
+    chord = np.linalg.norm(px[2:4].mean(axis=0) - centre) / np.linalg.norm(axes[:, 0])
+    axes[:, 1] /= np.sqrt(1 - chord**2)
+    return centre - px[4], axes
+
+
+def paint_ball(canvas: Canvas, ball: Ball, centre: Floats, axes: Floats, depth: float, shade: Shade) -> None:
+    """A sphere as the ellipse that its outline is; `axes` (2, 2) are conjugate half axes, as columns [px]."""
+    if not _holds(canvas, centre[None], 300.0)[0]:
+        return
+    size = float(np.sqrt(abs(np.linalg.det(axes))))
+    column, row = _patch(centre[None], float(np.hypot(axes[:, 0], axes[:, 1]).max()) + 2 * _EDGE_REACH)
+    unit = np.stack([column - centre[0], row - centre[1]], axis=-1) @ np.linalg.inv(axes).T  # within 1: covered
+    distance = np.linalg.norm(unit, axis=-1).astype(np.float32) * np.float32(size)
+    cover = _round(np.full_like(distance, size), distance)
+    left, _, right = np.linalg.svd(axes)
+    turned = (unit @ (left @ right).T).astype(np.float32)  # the same in the picture's directions, for the light
+    albedo = np.full_like(distance, ball.albedo)
+    light = shade.on(turned[..., 0], turned[..., 1], albedo, ball.specular, 20.0)
+    canvas.add(column, row, cover, light, np.full_like(distance, depth))

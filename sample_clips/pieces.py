@@ -1,7 +1,7 @@
 """From a motion to pieces that can be followed through a frame: points with fixed labels at each knot of time.
 
 A line is cut at fixed material coordinates (beads at multiples of the pitch, a cable every 1.6 px), a bar into short lengths, a ball
-is four points of its outline.
+is its centre.
 """
 
 from collections.abc import Sequence
@@ -163,34 +163,10 @@ def _bars(camera: Camera, bars: Sequence[Bars], shininess: float) -> Line | None
     return Line(places, shown, joined, first.radius_m[owner[:-1]], first.albedo[owner[:-1]], first.specular, shininess, None, area)
 
 
-def _outlines(camera: Camera, balls: Sequence[Ball], t: float) -> Floats:
-    """Four points (4 n, 3) of each sphere's outline in WORLD axes, opposite ones in turn.
-
-    The outline of a sphere is the circle in which the cone from the lens touches it; in the picture an ellipse whose centre is
-    not quite the picture of the sphere's centre.
-    """
-    lens = np.asarray(camera.position_m)
-    points = []
-    for ball in balls:
-        ray = np.asarray(ball.centre_m, dtype=float) - lens
-        distance = float(np.linalg.norm(ray))
-        shrink = 1 - (ball.radius_m / distance) ** 2
-        axis = ray / distance
-        forward = camera.rotation[2]
-        radial = forward - (forward @ axis) * axis
-        if np.linalg.norm(radial) < 1e-9:
-            radial = camera.rotation[0] - (camera.rotation[0] @ axis) * axis
-        radial /= np.linalg.norm(radial)
-        across = np.cross(axis, radial)
-        centre, reach = lens + shrink * ray, ball.radius_m * shrink**0.5
-        points += [centre + reach * radial, centre - reach * radial, centre + reach * across, centre - reach * across]
-    return np.array(points)
-
-
 def gather(
     camera: Camera, knots: Knots, motion: Motion, style: LineStyle
 ) -> tuple[list[Line], Beads | None, list[Ball], Floats]:
-    """Ask the motion at the knots: lines, beads, the balls of the middle knot and all balls' outlines (k, 4 n, 3)."""
+    """Ask the motion at the knots: lines, beads, the balls of the middle knot and all balls' centres (k, n, 3)."""
     lines: list[Line] = []
     beads: Beads | None = None
     strands = [motion.strand(float(t)) for t in knots.times] if hasattr(motion, "strand") else []
@@ -213,8 +189,8 @@ def gather(
     rounds = [_as_balls(motion.discs(float(t))) for t in knots.times] if hasattr(motion, "discs") else []
     if not rounds or not rounds[0]:
         return lines, beads, [], np.empty((0, 0, 3))
-    outline = np.stack([_outlines(camera, balls, float(t)) for balls, t in zip(rounds, knots.times, strict=True)])
-    return lines, beads, rounds[knots.middle], outline
+    centres = np.array([[ball.centre_m for ball in balls] for balls in rounds], dtype=float)
+    return lines, beads, rounds[knots.middle], centres
 
 
 def _as_balls(discs: "Sequence[Ball | tuple[Floats, float, float]]") -> list[Ball]:

@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 
 from sample_clips.camera import Camera
 
-__all__ = ["Knots", "Seen", "Track", "seen_by", "watch"]
+__all__ = ["Knots", "Seen", "Track", "row_shear", "seen_by", "watch"]
 
 Floats = NDArray[np.float64]
 Flags = NDArray[np.bool_]
@@ -97,3 +97,20 @@ def seen_by(camera: Camera, knots: Knots, track: Track, frame_s: float, offset_s
     nearest = np.clip(np.rint((t - knots.start) / knots.step).astype(np.intp), 0, knots.number - 1)
     each = np.arange(t.size)
     return Seen(knots.cubic(track.px, t), knots.cubic(track.depth, t), track.shown[nearest, each], t)
+
+
+def row_shear(camera: Camera, knots: Knots, track: Track, seen: Seen) -> Floats:
+    """How the rows' different times shear a small thing that moves as a whole, for each of the points it is followed by.
+
+    Parts that lie e beside the point in the picture of one moment are seen e' = e + w rho (n . e') beside it, with w the speed in the
+    picture, rho the time from row to row and n the direction of reading: e' = (1 - rho w n^T)^-1 e.
+
+    Returns
+    -------
+    (m, 2, 2) array
+        Those matrices.
+    """
+    step = 1e-5
+    speed = (knots.cubic(track.px, seen.t + step) - knots.cubic(track.px, seen.t - step)) / (2 * step)
+    rho_n = camera.delay(np.eye(2)) - camera.delay(np.zeros(2))
+    return np.asarray(np.linalg.inv(np.eye(2) - speed[:, :, None] * rho_n[None, None, :]), dtype=float)

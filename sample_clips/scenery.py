@@ -1,6 +1,6 @@
 """What stands still: wall, boards, boxes (bench, stand, beam), container, and the light on them.
 
-The picture of it is traced once, in linear light: one ray a pixel where the scene is smooth, 36 where a surface or a printed
+The picture of it is traced once, in linear light: one ray a pixel where the scene is smooth, 55 where a surface or a printed
 square ends within a pixel. Lengths in metres, world axes x right, y away from the camera, z up.
 """
 
@@ -17,7 +17,7 @@ __all__ = ["Board", "Box", "Container", "Light", "Print", "Scenery", "Still", "W
 
 Floats = NDArray[np.float64]
 Singles = NDArray[np.float32]
-_FINE = 6  # rays along each side of a pixel where an edge runs through it
+_RAYS, _TURN = 55, 34  # a Fibonacci lattice: rays in a pixel with an edge, even along every direction
 _CLOSE_M = 0.015  # surfaces this near in depth hide a line together
 
 
@@ -281,8 +281,8 @@ def trace(scenery: Scenery, camera: Camera) -> Still:
 
     Notes
     -----
-    A pixel is an average over its square: 36 rays where an edge runs through it or its neighbours, else one. An edge is so placed
-    to better than 0.02 px on average along it.
+    A pixel is an average over its square: 55 rays where an edge runs through it or a neighbour, else one. They lie on a
+    Fibonacci lattice, so that an edge along rows or columns is resolved to 1/55 px, where a square grid would give 1/7.
     """
     height, width = camera.height, camera.width
     row, column = np.mgrid[0:height, 0:width].astype(float)
@@ -302,17 +302,17 @@ def trace(scenery: Scenery, camera: Camera) -> Still:
     kernel = np.ones((3, 3), np.uint8)
     as_float = label.astype(np.float32)
     edge = cv2.dilate(as_float, kernel) != cv2.erode(as_float, kernel)
-    step = (np.arange(_FINE) + 0.5) / _FINE - 0.5
-    sub = np.stack(np.meshgrid(step, step), axis=-1).reshape(-1, 2)
+    number = np.arange(_RAYS)
+    sub = np.stack([(number + 0.5) / _RAYS, (number * _TURN % _RAYS + 0.5) / _RAYS], axis=-1) - 0.5
     rows, columns = np.nonzero(edge)
     for part in np.array_split(np.arange(rows.size), max(1, rows.size // 20000)):
         at = (rows[part], columns[part])
         rays = ideal[at][:, None] + by_column[at][:, None] * sub[:, :1] + by_row[at][:, None] * sub[:, 1:]
         many = caster.cast(rays.reshape(-1, 2))
-        near = np.where(many.label >= 16, many.depth, np.inf).reshape(part.size, -1)
+        near = np.where(many.label >= 16, many.depth, np.inf).reshape(-1, len(sub))
         nearest = near.min(axis=1)
-        light[at] = many.light.reshape(part.size, -1).mean(axis=1)
-        direct[at] = many.direct.reshape(part.size, -1).mean(axis=1)
+        light[at] = many.light.reshape(-1, len(sub)).mean(axis=1)
+        direct[at] = many.direct.reshape(-1, len(sub)).mean(axis=1)
         depth[at] = nearest
         front[at] = (near <= np.where(np.isfinite(nearest), nearest + _CLOSE_M, -1.0)[:, None]).mean(axis=1)
     return Still(*(picture.astype(np.float32) for picture in (light, front, depth, direct)))

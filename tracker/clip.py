@@ -241,7 +241,7 @@ class Clip:
         Raises
         ------
         CannotMeasure
-            Not one frame of the range decodes, or the picture changes its size.
+            The picture changes its size on the way.
         """
         stop = self._checked_range(start, stop)
         return _run_ahead(lambda: self._upright(start, stop), self._ahead()) if stop > start else iter(())
@@ -320,10 +320,11 @@ class Clip:
         if not damaged:
             return
         self._missing |= missing
-        for i in damaged:  # later pictures are drawn from earlier ones up to the next key frame
-            key = bisect_right(index.key_ticks, int(index.ticks[i]))
-            end = index.place.get(index.key_ticks[key], i + 1) if key < len(index.key_ticks) else len(index.ticks)
-            self._doubtful |= set(range(i + 1, end)) & seen
+        for i in damaged:  # what is decoded later may be drawn from it, up to the next key frame
+            key = bisect_right(index.key_turn, int(index.turn[i]))
+            end = index.key_turn[key] if key < len(index.key_turn) else np.inf
+            after = np.flatnonzero((index.turn > index.turn[i]) & (index.turn < end))
+            self._doubtful |= set(after.tolist()) & seen
         if not self._missing:
             return
         first = min(self._missing)
@@ -351,17 +352,18 @@ def _open(path: Path) -> InputContainer:
     try:
         with path.open("rb") as file:
             head = file.read(12)
-        if not head:
-            raise BadInput(f"{name}: the file is empty (0 bytes).", COPY_AGAIN)
+    except OSError as fault:
+        raise BadInput(f"{name}: cannot be read ({fault.strerror}).", "Check its permissions, or copy it elsewhere.") from fault
+    if not head:
+        raise BadInput(f"{name}: the file is empty (0 bytes).", COPY_AGAIN)
+    try:
         # Only local files: a renamed playlist must not make this machine fetch something.
         return av.open(
             str(path.absolute()), "r", metadata_errors="replace", options={"protocol_whitelist": "file"}
         )
-    except PermissionError:
-        raise BadInput(f"{name}: reading it is not permitted.", "Change its permissions or copy it.") from None
     except (av.FFmpegError, OSError, ValueError) as fault:
         if head[4:8] in (b"ftyp", b"mdat", b"wide", b"moov", b"free"):
-            raise BadInput(f"{name}: the file's index is missing or damaged, so it was cut short.", COPY_AGAIN) from fault
+            raise BadInput(f"{name}: is incomplete: its index, which is written last, is missing or damaged.", COPY_AGAIN) from fault
         raise BadInput(
             f"{name}: is not a video file that can be read.", "Give the clip as the phone recorded it (MP4, MOV, MKV, WebM, AVI)."
         ) from fault
@@ -376,8 +378,8 @@ def _choose(container: InputContainer, path: Path, wanted: int | None) -> tuple[
         if not films:
             raise BadInput(f"{path.name}: stream {wanted} is not a video stream.", "Leave the stream out, or name another.")
     if not films:
-        sound = " It holds sound only." if container.streams.audio else ""
-        raise BadInput(f"{path.name}: holds no video.{sound}", "Give the clip itself.")
+        what = "sound only, no video" if container.streams.audio else "no video"
+        raise BadInput(f"{path.name}: holds {what}.", "Give the clip as the phone recorded it.")
     best = max(films, key=lambda s: (s.width * s.height, s.frames, -s.index))
     if len(films) == 1:
         return best, ()
@@ -426,6 +428,8 @@ class _Index:
     key_ticks: tuple[int, ...]  # rising
     key_dts: tuple[int, ...]
     place: dict[int, int]  # tick -> index
+    turn: NDArray[np.int64]  # (n,) turn of each frame in decode order
+    key_turn: tuple[int, ...]  # the same of key frames, rising
     notices: tuple[Notice, ...]
 
     def key_before(self, index: int) -> int:
@@ -449,7 +453,8 @@ class _Index:
 def _read_through(container: InputContainer, stream: VideoStream, path: Path) -> "tuple[_Index, _Look]":
     """Read all packets once; decode only until the first sound picture is seen."""
     shown: list[tuple[int | None, int | None]] = []
-    keys: dict[int, int] = {}
+    keys: dict[int, tuple[int, int]] = {}  # stamp -> decode stamp, turn
+    turns: dict[int | None, int] = {}
     look: _Look | None = None
     corrupt = hidden = 0
     broken = False
@@ -462,10 +467,11 @@ def _read_through(container: InputContainer, stream: VideoStream, path: Path) ->
                 continue
             corrupt += packet.is_corrupt
             if packet.is_keyframe and packet.pts is not None and packet.dts is not None:
-                keys[packet.pts] = packet.dts
+                keys[packet.pts] = packet.dts, len(shown)
             if packet.is_discard:
                 hidden += 1
             elif not _is_invisible(codec, packet):
+                turns.setdefault(packet.dts if packet.pts is None else packet.pts, len(shown))
                 shown.append((packet.pts, packet.dts))
     except (av.FFmpegError, OSError):
         broken = True
@@ -486,8 +492,9 @@ def _read_through(container: InputContainer, stream: VideoStream, path: Path) ->
     ticks.flags.writeable = False
     ordered = sorted(keys)
     place = {int(t): i for i, t in enumerate(ticks)}
-    index = _Index(ticks, time_base, by_order, tuple(ordered), tuple(keys[k] for k in ordered), place, tuple(said))
-    return index, look
+    turn = np.array([turns.get(int(t), i) for i, t in enumerate(ticks)], dtype=np.int64)
+    key_dts, key_turn = tuple(keys[k][0] for k in ordered), tuple(sorted(k[1] for k in keys.values()))
+    return _Index(ticks, time_base, by_order, tuple(ordered), key_dts, place, turn, key_turn, tuple(said)), look
 
 
 def _cut_short(name: str, found: int, promised: int, in_part: int) -> Notice:

@@ -14,9 +14,10 @@ def main(arguments: list[str] | None = None) -> int:
     parser = argparse.ArgumentParser(prog="python -m tracker.report", description=__doc__)
     parser.add_argument("folder", type=Path, nargs="?", default=Path("harrow-point-demo"))
     parser.add_argument("--kind", choices=sorted(DEMOS), default="payout")
+    parser.add_argument("--frames", type=int, default=240, help="how many frames to invent")
     parser.add_argument("--replace", action="store_true")
     asked = parser.parse_args(arguments)
-    made = demo(asked.kind)
+    made = demo(asked.kind, asked.frames)
     try:
         print(write_folder(made.result, asked.folder, frames=made.frames, replace=asked.replace) / "report.html")
     except BadInput as fault:

@@ -416,6 +416,7 @@ def _span(course: _Course) -> str:
 def _finish(figure: Figure, stem: str, finding: str, alt: str) -> Plot:
     svg, png = io.StringIO(), io.BytesIO()
     figure.savefig(svg, format="svg", metadata={"Date": None, "Creator": None})
+    figure.set_layout_engine("none")  # laid out once: it takes as long as drawing
     figure.savefig(png, format="png", dpi=PNG_DPI, metadata={"Software": None})
     return Plot(stem, finding, alt, _open_font(svg.getvalue()), png.getvalue())
 

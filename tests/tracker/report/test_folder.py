@@ -5,6 +5,8 @@ import os
 from pathlib import Path
 from typing import Any
 
+import av
+import numpy as np
 import pytest
 
 from calibration.notice import BadInput, CannotMeasure
@@ -12,6 +14,7 @@ from tracker.report import folder as room
 from tracker.report.demo import Demo, demo
 from tracker.report.folder import write_folder
 from tracker.report.plain import sha256_of
+from tracker.report.plots import draw
 from tracker.report.stored import read_result
 
 
@@ -20,14 +23,26 @@ def made() -> Demo:
     return demo("payout", frames=24, size=(90, 160))
 
 
+@pytest.fixture(autouse=True)
+def no_plots(monkeypatch: pytest.MonkeyPatch) -> None:
+    """Plots are drawn only where a test looks at them: they take most of the time."""
+    monkeypatch.setattr(room, "draw", lambda result: ())
+
+
 def names(folder: Path) -> set[str]:
     return {path.name for path in folder.iterdir()}
 
 
-def test_a_folder_holds_what_the_contract_says(made: Demo, tmp_path: Path) -> None:
-    out = write_folder(made.result, tmp_path / "deep" / "run-07-results", frames=made.frames)
-    assert {"result.json", "summary.csv", "frames.csv"} <= names(out)
+def test_a_folder_holds_what_the_contract_says(made: Demo, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr(room, "draw", draw)
+    told = []
+    out = write_folder(
+        made.result, tmp_path / "deep" / "run-07-results", frames=made.frames, progress=lambda *step: told.append(step)
+    )
+    assert names(out) == {"result.json", "summary.csv", "frames.csv", "overlay.mp4", "report.html", "plots"}
+    assert {"arc-height.svg", "arc-height.png", "budget.svg", "still-window.png"} <= names(out / "plots")
     assert names(out.parent) == {"run-07-results"}
+    assert ("overlay", 24, 24) in told and [step[0] for step in told if step[0] != "overlay"] == ["tables", "plots", "report"]
     stored = read_result(out)
     assert stored.quantities == made.result.quantities
     hashes = stored.document["files"]
@@ -145,3 +160,44 @@ def test_a_folder_that_is_no_result_cannot_be_read(tmp_path: Path) -> None:
     with pytest.raises(BadInput, match="lacks what a result has: 'kind'"):
         read_result(tmp_path)
 
+
+def test_without_overlay_stills_come_from_single_frames(made: Demo, tmp_path: Path) -> None:
+    pictures, asked = dict(made.frames()), []
+
+    def sample(numbers: list[int]) -> list[np.ndarray]:
+        asked.extend(numbers)
+        return [pictures[number] for number in numbers]
+
+    out = write_folder(made.result, tmp_path / "r", frames=made.frames, sample=sample, overlay=False)
+    assert "overlay.mp4" not in names(out) and "still-window.png" in names(out / "plots")
+    assert asked == sorted(set(asked)) and len(asked) <= 4
+    assert 'href="overlay.mp4"' not in (out / "report.html").read_text(encoding="utf-8")
+
+
+def test_a_disk_that_fills_while_the_video_is_written_is_the_same_sentence(
+    made: Demo, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """FFmpeg's own error for a full disk is an OSError with ENOSPC too."""
+
+    def full(*_: Any) -> None:
+        raise av.error.OSError(errno.ENOSPC, "No space left on device", "overlay.mp4")
+
+    monkeypatch.setattr(room, "write_overlay", full)
+    with pytest.raises(BadInput, match="the disk is full"):
+        write_folder(made.result, tmp_path / "r", frames=made.frames)
+    assert names(tmp_path) == set()
+
+
+def test_a_folder_above_that_cannot_be_made_is_said(made: Demo, tmp_path: Path) -> None:
+    (tmp_path / "file").write_text("in the way", encoding="utf-8")
+    with pytest.raises(BadInput, match="cannot be written"):
+        write_folder(made.result, tmp_path / "file" / "r", overlay=False)
+
+
+def test_the_same_result_is_the_same_to_the_byte(made: Demo, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr(room, "draw", draw)
+    monkeypatch.setenv("SOURCE_DATE_EPOCH", "1796134000")
+    folders = [write_folder(made.result, tmp_path / name, frames=made.frames) for name in ("a", "b")]
+    files = [{path.relative_to(out): path.read_bytes() for path in sorted(out.rglob("*")) if path.is_file()} for out in folders]
+    assert files[0].keys() == files[1].keys()
+    assert [name for name in files[0] if files[0][name] != files[1][name]] == []

@@ -17,6 +17,7 @@ import cv2
 import numpy as np
 from numpy.typing import NDArray
 
+from calibration.notice import BadInput
 from tracker.progress import Progress, silent
 from tracker.report.colours import ROLES, rgb
 from tracker.report.lettering import lettering
@@ -276,6 +277,8 @@ def write_overlay(
     ------
     OSError
         The disk is full or the file cannot be written.
+    BadInput
+        The installed PyAV cannot code H.264.
     ValueError
         There were no frames.
     """
@@ -329,7 +332,13 @@ _SQUARE = np.array([[-5.0, -5.0], [5.0, -5.0], [5.0, 5.0], [-5.0, 5.0]])
 
 
 def _stream(container: Any, painter: Painter) -> Any:
-    stream = container.add_stream("libx264", rate=SHOWN_FPS, options={"preset": "veryfast", "crf": "23", "profile": "high"})
+    try:
+        stream = container.add_stream("libx264", rate=SHOWN_FPS, options={"preset": "veryfast", "crf": "23", "profile": "high"})
+    except av.codec.codec.UnknownCodecError:
+        raise BadInput(
+            "The PyAV that is installed has no H.264 encoder, so the overlay video cannot be written.",
+            "Install PyAV from the package registry (its own builds have one), or measure with --no-overlay.",
+        ) from None
     stream.width, stream.height, stream.pix_fmt = painter.width, painter.height, "yuv420p"
     context = stream.codec_context
     context.time_base = Fraction(1, SHOWN_FPS)

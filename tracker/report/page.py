@@ -94,9 +94,12 @@ def _template() -> Any:
     return room.get_template("report.html")
 
 
+_PARTED = re.compile(r"(?<=\d) (?=(?:mm|m|s|px|%|m/s|m/s²|kg|frames/s|[±×])(?![\w/²]))|(?<=[±×]) (?=\d)")
+
+
 def _minus(text: str) -> str:
-    """A hyphen before a digit becomes a minus sign, which is read aloud as one."""
-    return re.sub(r"(?<![\w.-])-(?=\d)", "−", str(text))
+    """A hyphen before a digit becomes a minus sign, which is read aloud as one; no line ends between number and unit."""
+    return _PARTED.sub("\u00a0", re.sub(r"(?<![\w.-])-(?=\d)", "−", str(text)))
 
 
 def _sentence(text: str) -> str:

@@ -9,6 +9,8 @@ import cv2
 import numpy as np
 import pytest
 
+from calibration.notice import BadInput
+from tracker.report import overlay
 from tracker.report.colours import ROLES, contrast, rgb
 from tracker.report.demo import Demo, demo
 from tracker.report.lettering import lettering
@@ -176,6 +178,18 @@ def test_stills_are_the_telling_frames(made: Demo) -> None:
 def test_no_frames_is_said(made: Demo, tmp_path: Path) -> None:
     with pytest.raises(ValueError, match="no frames"):
         write_overlay(made.result, iter(()), tmp_path / "overlay.mp4")
+
+
+def test_a_library_without_an_encoder_is_said(made: Demo, tmp_path: Path) -> None:
+    with pytest.raises(av.codec.codec.UnknownCodecError), av.open(str(tmp_path / "x.mp4"), "w") as container:
+        container.add_stream("no-such-coder", rate=30)  # this is how PyAV says it
+
+    class Bare:
+        def add_stream(self, name: str, **_: object) -> object:
+            raise av.codec.codec.UnknownCodecError(name)
+
+    with pytest.raises(BadInput, match=r"no H\.264 encoder.*--no-overlay"):
+        overlay._stream(Bare(), Painter(made.result, (360, 640)))
 
 
 def test_memory_does_not_grow_with_the_clip(made: Demo, tmp_path: Path) -> None:

@@ -49,8 +49,8 @@ def test_warnings_are_sentences() -> None:
 
 
 def test_the_demo_command_writes_a_folder_and_says_where(tmp_path: Path, capsys: object) -> None:
-    assert main([str(tmp_path / "d"), "--kind", "surface-drop", "--frames", "130"]) == 0
+    assert main([str(tmp_path / "d"), "--kind", "payout", "--frames", "12"]) == 0
     assert (tmp_path / "d" / "report.html").stat().st_size > 50_000
-    assert main([str(tmp_path / "d"), "--kind", "surface-drop", "--frames", "130"]) == 2
+    assert main([str(tmp_path / "d"), "--kind", "payout", "--frames", "12"]) == 2
     out, err = capsys.readouterr()  # type: ignore[attr-defined]
     assert out.strip() == str(tmp_path / "d" / "report.html") and "exists already and is kept" in err

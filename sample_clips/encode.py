@@ -63,7 +63,8 @@ def write_clip(
     capture_fps_tag : float, optional
         True rate, written as phones do [1/s]; absent: no tag.
     crf : float
-        Constant rate factor: 18 is near transparent, 28 is a cheap phone.
+        Constant rate factor. Both encoders spend less on a frame that is shown shortly: at 240 frames/s and 720 x 1280 with 2.4 grey
+        levels of noise 14 keeps the noise (37 kB a frame), 18 smooths it away as phones do (7 kB), 28 is a cheap phone (1.5 kB).
     keyframe_every : int
         Frames between key frames at most.
     preset : str

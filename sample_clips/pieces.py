@@ -67,8 +67,15 @@ def _material(strands: Sequence[StrandLike], s: Floats) -> tuple[Floats, Flags]:
     return places, shown
 
 
-def _in_view(camera: Camera, strand: StrandLike, t: float) -> tuple[float, float] | None:
-    """Smallest and largest s of the part of a strand in or near the picture."""
+def _in_view(camera: Camera, knots: Knots, strands: Sequence[StrandLike]) -> tuple[float, float] | None:
+    """Smallest and largest s of what is in or near the picture at the first, middle or last knot: material runs through it."""
+    times = knots.times
+    spans = [_span(camera, strands[k], float(times[k])) for k in (0, knots.middle, knots.number - 1)]
+    seen = [span for span in spans if span is not None]
+    return (min(low for low, _ in seen), max(high for _, high in seen)) if seen else None
+
+
+def _span(camera: Camera, strand: StrandLike, t: float) -> tuple[float, float] | None:
     px = camera.project(strand.points_m, t)
     with np.errstate(invalid="ignore"):
         near = (np.abs(px[:, 0] - camera.width / 2) < camera.width / 2 + 60) & (
@@ -83,7 +90,7 @@ def _in_view(camera: Camera, strand: StrandLike, t: float) -> tuple[float, float
 
 def _cable(camera: Camera, knots: Knots, strands: Sequence[StrandLike], style: LineStyle) -> Line | None:
     middle = strands[knots.middle]
-    view = _in_view(camera, middle, float(knots.times[knots.middle]))
+    view = _in_view(camera, knots, strands)
     if view is None:
         return None
     nearest = float(camera.to_camera(middle.points_m)[:, 2].min())
@@ -102,7 +109,7 @@ def _cable(camera: Camera, knots: Knots, strands: Sequence[StrandLike], style: L
 
 
 def _bead_chain(camera: Camera, knots: Knots, strands: Sequence[StrandLike], style: LineStyle) -> tuple[Beads, Line] | None:
-    view = _in_view(camera, strands[knots.middle], float(knots.times[knots.middle]))
+    view = _in_view(camera, knots, strands)
     if view is None:
         return None
     s = style.pitch_m * np.arange(np.floor(view[0] / style.pitch_m), np.ceil(view[1] / style.pitch_m) + 1)

@@ -91,9 +91,12 @@ def watch(camera: Camera, knots: Knots, points_m: Floats, shown: Flags) -> Track
 def seen_by(camera: Camera, knots: Knots, track: Track, frame_s: float, offset_s: float) -> Seen:
     """Each point where its own row sees it, `offset_s` from that row's mid-exposure."""
     t = np.full(track.px.shape[1], frame_s + offset_s + camera.readout_s / 2)
-    for _ in range(5):  # each pass shrinks the error by the share of the readout that the motion runs through: 1/20
-        px = knots.cubic(track.px, t)
-        t = frame_s + offset_s + camera.delay(px)
+    low, high = knots.start, knots.start + knots.step * (knots.number - 1)
+    for _ in range(40):  # each pass shrinks the error by the share of the scan's speed that the motion has: 1/20, seldom 1/2
+        before = t
+        t = np.clip(frame_s + offset_s + camera.delay(knots.cubic(track.px, t)), low, high)
+        if np.abs(t - before).max(initial=0.0) < 1e-8:
+            break
     nearest = np.clip(np.rint((t - knots.start) / knots.step).astype(np.intp), 0, knots.number - 1)
     each = np.arange(t.size)
     return Seen(knots.cubic(track.px, t), knots.cubic(track.depth, t), track.shown[nearest, each], t)

@@ -204,6 +204,38 @@ def test_a_moving_ball_agrees_with_brute_force_row_by_row():
     assert np.sqrt((off**2).sum() / (expected**2).sum()) < 0.01
 
 
+@pytest.mark.parametrize("kind", ["beads", "cable"])
+@pytest.mark.parametrize("readout", [0.03, -0.03])
+def test_a_line_that_runs_fast_along_itself_is_seen_in_every_row(kind, readout):
+    """Each row sees other material: over the readout 0.24 m of line run past."""
+    camera = replace(CAMERA, readout_s=readout)
+    style = LineStyle(kind=kind, radius_m=0.003, pitch_m=0.006, albedo=0.05, specular=0.0)
+
+    class Running:
+        def strand(self, t):
+            s = np.arange(-2.0, 2.0, 0.002) + 8.0 * t  # always as long, whatever material it is
+            points = np.stack([0 * s, 0 * s, s - 8.0 * t], axis=1)
+            return Strand(points, s, np.ones(s.size, bool))
+
+    rows = change(Running(), camera, style, frame_s=0.1).sum(axis=1)
+    assert rows.min() > 0.5 * np.median(rows) > 0.2
+
+
+def test_jointed_rods_have_gaps_at_their_joints():
+    """Level rods of 50 mm with a 3 mm gap on each side of every joint, and a marked one."""
+    style = LineStyle(
+        kind="rods", radius_m=0.003, gap_m=0.003, albedo=0.05, specular=0.0, mark_spacing_m=1.0, mark_length_m=0.05,
+        mark_offset_m=0.075, mark_albedo=0.25,
+    )  # fmt: skip
+    columns = change(Straight((-0.1, 0, 0), (0.1, 0, 0), n=5), style=style).sum(axis=0)
+    for joint in (-0.05, 0.0, 0.05):
+        column = round(float(CAMERA.project([joint, 0, 0])[0]))
+        assert columns[column] < 0.15 * columns[column + 10]
+    full = 0.006 * CAMERA.fx
+    middle = [int(CAMERA.project([x, 0, 0])[0]) for x in (-0.075, -0.025, 0.025)]
+    np.testing.assert_allclose(columns[middle], full * np.array([0.45, 0.25, 0.45]), rtol=0.01)
+
+
 def test_a_falling_rod_leans_as_the_rolling_shutter_makes_it():
     """A level rod under a camera that scans along columns: its ends are seen at different times."""
     camera = replace(CAMERA, quarter_turns=1)

@@ -548,7 +548,7 @@ def _without_outliers(pixels: Points, cells: NDArray[np.int_]) -> tuple[Points, 
         return pixels, cells, 0
     for _ in range(6):
         size = np.hypot(*_rest(pixels, cells, good).T)
-        limit = max(5.0 * float(np.median(size[good])) / 1.1774, 0.15)
+        limit = max(5.0 * float(np.median(size[good])) / 1.1774, 0.3)
         kept = size < limit
         if (kept == good).all() or kept.sum() < 0.75 * len(pixels):
             break

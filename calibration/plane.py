@@ -36,7 +36,7 @@ Shared = Literal["run", "station", "board", "lens", "site"]
 
 PARAMETERS = (
     "turn_x", "turn_y", "turn_z",  # board to camera, rotation vector [rad]
-    "place_x", "place_y", "place_z",  # the board's middle in the camera's frame [m]
+    "bearing_x", "bearing_y", "log_depth",  # the board's middle in the camera's frame: X/Z, Y/Z, ln(Z / m)
     "log_focal", "log_aspect", "cx", "cy", "k1", "k2", "p1", "p2", "k3",
     "log_square",  # true over nominal square
     "offset",  # the board's middle behind the plane of motion [m]
@@ -396,6 +396,16 @@ def _turned(angles: Floats) -> Floats:
     return np.asarray(cv2.Rodrigues(np.asarray(angles, dtype=float))[0], dtype=float)
 
 
+def _place(theta: Floats) -> Floats:
+    """The board's middle in the camera's frame [m].
+
+    Held as a logarithm, a change of distance and one of the focal length cancel in the picture to all orders, as a
+    taped distance makes them do.
+    """
+    across, down, log_depth = theta[PLACE]
+    return np.asarray(np.array([across, down, 1.0]) * np.exp(log_depth), dtype=float)
+
+
 def _board_normal_frame(theta: Floats) -> Floats:
     """Rows: the plane of motion's across, down and away in the camera's frame, before gravity is taken in."""
     lean, yaw = theta[AT["lean"]], theta[AT["yaw"]]
@@ -406,7 +416,7 @@ def _board_normal_frame(theta: Floats) -> Floats:
 def _plane_axes(theta: Floats, plumb_px: Floats | None) -> tuple[Floats, Floats]:
     """The plane's axes as rows, in the camera's frame, and a point of it."""
     across, down, away = _board_normal_frame(theta)
-    point = theta[PLACE] - theta[AT["offset"]] * away
+    point = _place(theta) - theta[AT["offset"]] * away
     angle = -theta[AT["vertical"]]
     if plumb_px is not None:
         # The plane through the lens and the plumb line holds gravity, so does the plane of motion: it is their cut.
@@ -421,7 +431,7 @@ def _plane_axes(theta: Floats, plumb_px: Floats | None) -> tuple[Floats, Floats]
 def _seen(theta: Floats, points_m: Floats) -> Floats:
     """Pixels of places (n, 2) on the board [m, nominal square]."""
     turn = _turned(theta[TURN])
-    space = np.exp(theta[AT["log_square"]]) * points_m @ turn[:, :2].T + theta[PLACE]
+    space = np.exp(theta[AT["log_square"]]) * points_m @ turn[:, :2].T + _place(theta)
     return _pixels(theta, space[:, :2] / space[:, 2:])
 
 
@@ -430,10 +440,12 @@ def _seen_slope(theta: Floats, points_m: Floats) -> Floats:
     fx, fy, cx, cy, k = _inner(theta)
     scale = float(np.exp(theta[AT["log_square"]]))
     board = np.c_[scale * points_m, np.zeros(len(points_m))]
-    _, jacobian = cv2.projectPoints(board, theta[TURN], theta[PLACE], np.array([[fx, 0, cx], [0, fy, cy], [0, 0, 1.0]]), k)
+    place = _place(theta)
+    _, jacobian = cv2.projectPoints(board, theta[TURN], place, np.array([[fx, 0, cx], [0, fy, cy], [0, 0, 1.0]]), k)
     jacobian = jacobian.reshape(len(board), 2, -1)  # turn, place, fx, fy, cx, cy, k1, k2, p1, p2, k3
     slope = np.zeros((len(board), 2, len(PARAMETERS)))
-    slope[..., 0:6] = jacobian[..., 0:6]
+    slope[..., TURN] = jacobian[..., 0:3]
+    slope[..., PLACE] = jacobian[..., 3:6] @ np.array([[place[2], 0, place[0]], [0, place[2], place[1]], [0, 0, place[2]]])
     slope[..., AT["log_aspect"]] = jacobian[..., 7] * fy
     slope[..., AT["log_focal"]] = jacobian[..., 6] * fx + jacobian[..., 7] * fy
     slope[..., AT["cx"]: AT["k3"] + 1] = jacobian[..., 8:15]
@@ -444,13 +456,13 @@ def _seen_slope(theta: Floats, points_m: Floats) -> Floats:
 def _distance(theta: Floats) -> float:
     """Perpendicular distance of the lens to the plane of motion [m]."""
     away = _board_normal_frame(theta)[2]
-    return float(away @ theta[PLACE] - theta[AT["offset"]])
+    return float(away @ _place(theta) - theta[AT["offset"]])
 
 
 def _distance_slope(theta: Floats) -> Floats:
     """(22,), change of `_distance` with each parameter, by central differences: it is smooth and small."""
     slope = np.zeros(len(PARAMETERS))
-    for name in ("turn_x", "turn_y", "turn_z", "place_x", "place_y", "place_z", "offset", "lean", "yaw"):
+    for name in ("turn_x", "turn_y", "turn_z", "bearing_x", "bearing_y", "log_depth", "offset", "lean", "yaw"):
         step = np.zeros(len(PARAMETERS))
         step[AT[name]] = 1e-5
         slope[AT[name]] = (_distance(theta + step) - _distance(theta - step)) / 2e-5
@@ -573,7 +585,7 @@ def _starts(find: BoardFind, expected: _Expected) -> list[Floats]:
     if expected.lens is None and expected.distance is not None:
         theta[AT["log_focal"]] = np.log(px * (expected.distance[0] + theta[AT["offset"]]))
     if find.along_line:
-        theta[PLACE] = np.append(_rays(theta, middle), 1.0) * np.exp(theta[AT["log_focal"]]) / px
+        theta[PLACE] = np.append(_rays(theta, middle), theta[AT["log_focal"]] - np.log(px))
         direction = find.corners_px[-1] - find.corners_px[0]
         wanted = find.points_m[-1] - find.points_m[0]
         theta[AT["turn_z"]] = np.arctan2(direction[1], direction[0]) - np.arctan2(wanted[1], wanted[0])
@@ -584,8 +596,9 @@ def _starts(find: BoardFind, expected: _Expected) -> list[Floats]:
     starts = []
     for n in range(count):
         start = theta.copy()
-        start[TURN], start[PLACE] = np.ravel(turns[n]), np.ravel(places[n])
-        if start[AT["place_z"]] > 0 and np.isfinite(start).all():
+        x, y, z = np.ravel(places[n])
+        if z > 0:
+            start[TURN], start[PLACE] = np.ravel(turns[n]), (x / z, y / z, np.log(z))
             starts.append(start)
     if not starts:
         raise CannotMeasure("The board's corners do not fit any place of a flat board before the camera.",
@@ -628,7 +641,7 @@ def _solve_with(find: BoardFind, expected: _Expected, whiten: Floats, starts: Se
     scale = np.sqrt((jacobian**2).sum(axis=0))
     if not (scale > 0).all():
         raise CannotMeasure("The board does not fix the camera.", "Show the whole board.", "board-weak")
-    gain = -np.linalg.pinv(jacobian / scale, rcond=1e-11) / scale[:, None]  # missing = seen - told
+    gain = np.linalg.pinv(jacobian / scale, rcond=1e-11) / scale[:, None]  # what is told +1 u, theta follows
     full = np.zeros((len(PARAMETERS), gain.shape[1]))
     full[free] = gain
     theta = expected.start.copy()
@@ -663,9 +676,8 @@ def _sources(find: BoardFind, expected: _Expected, solved: _Solved, size: tuple[
     place = _hash("station", station) if station else _hash(np.asarray(find.corners_px).tobytes().hex(), origin_px)
     sources = []
     for number, prior in enumerate(expected.priors):
-        dtheta = -solved.gain[:, n_corner + number]
-        # `missing` counts a prior as row . theta - mean: raising the told mean by one u lowers it by one.
-        sources.append((prior.name, prior.label, prior.u, prior.unit, prior.shared, prior.key, -dtheta))
+        dtheta = solved.gain[:, n_corner + number]
+        sources.append((prior.name, prior.label, prior.u, prior.unit, prior.shared, prior.key, dtheta))
     if expected.distance is not None:
         sources.append(("distance", "distance lens to plane", expected.distance[1], "m", "station",
                         f"distance {expected.distance}", solved.gain[:, -1]))

@@ -7,7 +7,7 @@ A drawn truth may have any lens within the stated prior: a study of the method, 
 """
 
 import sys
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 import numpy as np
 
@@ -16,7 +16,7 @@ from calibration.lens import Lens, LensPrior
 from calibration.plane import AT, BIAS_REACH_SQUARES, PARAMETERS, U_BIAS_PX, Plane, fit_plane
 from calibration.plane import _seen as seen_corners
 
-__all__ = ["Case", "KINDS", "Station", "draw_station", "study"]
+__all__ = ["KINDS", "Case", "Station", "draw_station", "study"]
 
 KINDS = ("distance", "distance, far offset", "lens file", "nothing but the board", "plumb line")
 
@@ -65,7 +65,8 @@ def draw_station(rng: np.random.Generator, kind: str) -> Station | None:
     theta[AT["lean"]], theta[AT["yaw"]] = rng.normal(0, np.radians(0.5), 2)
     theta[AT["vertical"]] = rng.normal(0, np.radians(0.3))
     depth = distance + offset
-    theta[AT["place_x"]:AT["place_z"] + 1] = np.append((middle_px - theta[AT["cx"]:AT["cy"] + 1]) / focal, 1.0) * depth
+    theta[AT["bearing_x"]:AT["bearing_y"] + 1] = (middle_px - theta[AT["cx"]:AT["cy"] + 1]) / focal
+    theta[AT["log_depth"]] = np.log(depth)
 
     clean = seen_corners(theta, points_m)
     if not ((clean > 10) & (clean < np.array(size) - 11)).all():
@@ -95,8 +96,9 @@ def draw_station(rng: np.random.Generator, kind: str) -> Station | None:
     fitted = fit_plane(find, spec, size=size, origin_px=(float(told[0]), float(told[1])), lens=lens,
                        offset_m=offset + rng.normal(0, u_offset), u_offset_m=u_offset, **extra)  # type: ignore[arg-type]
     ends = rng.uniform([0.15, 0.1], [0.85, 0.9], (4, 2, 2)) * size
-    ends[0] = datum + [[0, 0], [0, 0.3 * size[1] * (1 if datum[1] < size[1] / 2 else -1)]]  # a fall
-    return Station(truth, replace(fitted), ends)
+    ends[0] = datum
+    ends[0, 1, 1] += 0.3 * size[1] * (1 if datum[1] < size[1] / 2 else -1)  # a fall, or a rise
+    return Station(truth, fitted, ends)
 
 
 def _draw_lens(rng: np.random.Generator, theta: np.ndarray, size: tuple[int, int]) -> Lens:

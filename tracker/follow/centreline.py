@@ -272,7 +272,7 @@ class LineFollower:
         self._pool(mean, at[seen], q[seen], normal, half)
         move = np.zeros(points.shape[0])
         if not first:
-            move = _smooth_values(self._predicted_move(index, curve.shape[0]) + shift, 15)
+            move = _smooth_values(self._predicted_move(index, curve.shape[0]) + shift, 6)
         even, values = _even_with(points, move)
         self._curve, self._move = even, values
         exits = bool(

@@ -81,9 +81,10 @@ def see_marks(brightness: Floats, seen: NDArray[np.bool_], average_px: float, wi
     """
     n = brightness.size
     size = max(3, round(average_px))
-    if n < 4 * size:
+    if n < 6 * size:
         return []
-    smooth = np.convolve(np.pad(brightness, size // 2, mode="edge"), np.ones(size) / size, mode="valid")[:n]
+    kernel = np.convolve(np.ones(size) / size, np.ones(size) / size)  # twice: what beads leave after once is gone
+    smooth = np.convolve(np.pad(brightness, kernel.size // 2, mode="edge"), kernel, mode="valid")[:n]
     coarse = smooth[::_COARSE]
     reach = max(3, int(window_px / _COARSE) // 2)
     window = np.lib.stride_tricks.sliding_window_view(np.pad(coarse, reach, mode="reflect" if coarse.size > reach else "edge"), 2 * reach + 1)
@@ -97,7 +98,11 @@ def see_marks(brightness: Floats, seen: NDArray[np.bool_], average_px: float, wi
         for peak, height in zip(peaks, facts["peak_heights"], strict=True):
             found.append(_place(sign * out, int(peak), float(height), sign))
     found.sort(key=lambda f: -abs(f[1]))
-    return found[:_MOST_PER_FRAME]
+    apart: list[tuple[float, float, float]] = []
+    for f in found:  # two peaks of one mark share their half heights
+        if all(abs(f[0] - g[0]) > 0.5 * (f[2] + g[2]) for g in apart):
+            apart.append(f)
+    return apart[:_MOST_PER_FRAME]
 
 
 def _place(out: Floats, peak: int, height: float, sign: float) -> tuple[float, float, float]:

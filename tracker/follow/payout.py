@@ -14,7 +14,8 @@ from numpy.typing import ArrayLike, NDArray
 
 from calibration.clock import Clock
 from calibration.notice import Notice
-from tracker.follow.arc import Arc, arc_length, measure_arc
+from tracker.follow.along import Along, along_line, carried_jump, jitter
+from tracker.follow.arc import Arc, measure_arc
 from tracker.follow.background import Background
 from tracker.follow.centreline import Centreline, LineFollower
 from tracker.follow.marks import MarkSight, MarkTrack, follow_marks, see_marks
@@ -126,6 +127,7 @@ class _Kept:
     flags: list[str] = field(default_factory=list)
     line_px: NDArray[np.float32] = field(default_factory=lambda: np.zeros((0, 2), np.float32))
     u_line_px: NDArray[np.float32] = field(default_factory=lambda: np.zeros(0, np.float32))
+    jump_m: float = np.nan
     rest_px: float = np.nan
     lighter: float = np.nan
 
@@ -182,8 +184,9 @@ class _Reader:
         self.up = np.asarray(up)
         self.average_px = repeat if repeat is not None else max(3.0, 0.004 * self.px_per_m)
         self.kept: list[_Kept] = []
-        self.steps: list[tuple[float, float, float, float]] = []
+        self.steps: list[tuple[float, float, float, float, int]] = []
         self.last: tuple[int, TexturePhases] | None = None
+        self.last_along: tuple[int, Along] | None = None
 
     def read(self, index: int, gray: NDArray[np.uint8], motion: Any) -> None:
         kept = _Kept(index)
@@ -191,7 +194,7 @@ class _Reader:
         line = self.follower.follow(index, gray, motion)
         if line is None:
             kept.flags.append("line-lost")
-            self.last = None
+            self.last = self.last_along = None
             return
         points = line.points_px
         place = points if motion is None else np.asarray(motion.undo(points))
@@ -223,8 +226,18 @@ class _Reader:
     def _along(self, kept: _Kept, index: int, line: Centreline, place: Floats, metres: Floats) -> None:
         """Marks and texture in the coordinate along the line."""
         points = line.points_px
-        sigma = _from_rim(metres)
         t = self.clock.at(index, points)
+        frame_s = self.clock.frame_s
+        period = float(frame_s[index] - frame_s[index - 1]) if index > 0 else self.clock.period_s
+        tangent = np.gradient(metres, axis=0)
+        pixel = np.hypot(tangent[:, 0], tangent[:, 1]) / np.maximum(np.hypot(*np.gradient(points, axis=0).T), 1e-9)
+        normal = np.column_stack([-tangent[:, 1], tangent[:, 0]]) / np.maximum(np.hypot(*tangent.T), 1e-12)[:, None]
+        move = line.move_px * pixel
+        here = along_line(metres, move, normal, t, period)
+        sigma = here.sigma_m
+        if self.last_along is not None and self.last_along[0] == index - 1:
+            kept.jump_m = carried_jump(self.last_along[1], here, move, normal)
+        self.last_along = (index, here)
         column = np.clip(np.rint(place[:, 0]).astype(np.intp), 0, self.background.gray.shape[1] - 1)
         row = np.clip(np.rint(place[:, 1]).astype(np.intp), 0, self.background.gray.shape[0] - 1)
         shown = line.brightness + self.background.gray[row, column]
@@ -242,12 +255,13 @@ class _Reader:
             )  # fmt: skip
         if self.hints.pitch_m is None:
             return
-        late = t - self.clock.frame_s[index]
+        late = t - frame_s[index]
         now = texture_phases(line.brightness, sigma, late, line.seen, self.hints.pitch_m, self.average_px)
         if self.last is not None and self.last[0] == index - 1:
             step, u_step, mean_late = displacement_modulo_pitch(self.last[1], now, self.hints.pitch_m)
-            frame_s = self.clock.frame_s
-            self.steps.append((step, u_step, frame_s[index - 1] + mean_late, frame_s[index] + mean_late))
+            self.steps.append(
+                (step, u_step, frame_s[index - 1] + mean_late, frame_s[index] + mean_late, len(self.kept) - 1)
+            )
         self.last = (index, now)
 
     # at the end -----------------------------------------------------------------------------------------------------
@@ -277,13 +291,20 @@ class _Reader:
         if len(self.kept) < 3:
             return []
         first = self.kept[0].frame
-        sights = [[replace(s, frame=s.frame - first) for s in k.sights] for k in self.kept]
+        late = jitter(np.array([k.jump_m for k in self.kept]))
+        sights = [
+            [replace(s, frame=s.frame - first, sigma_m=s.sigma_m - off) for s in k.sights]
+            for k, off in zip(self.kept, late, strict=True)
+        ]
         return follow_marks(sights, frame_s, self.hints.mark_spacing_m)
 
     def _speed(self, tracks: list[MarkTrack], frame_s: Floats, at_s: Floats) -> SpeedSeries:
         texture = None
         if self.steps and self.hints.pitch_m is not None:
-            step, u, a, b = (np.array(x) for x in zip(*self.steps, strict=True))
+            step, u, a, b, number = (np.array(x) for x in zip(*self.steps, strict=True))
+            late = jitter(np.array([k.jump_m for k in self.kept]))
+            k = number.astype(np.intp)
+            step = step - (late[k] - late[k - 1])
             texture = TextureSteps(step, u, a, b, self.hints.pitch_m)
         rest = [k.rest_px for k in self.kept[1:6]]
         at_rest = len(rest) > 0 and bool(np.all(np.array(rest) < 0.1))
@@ -373,22 +394,6 @@ def _metres(plane: _Plane, points: Floats) -> Floats:
     off = at - design @ affine
     index = np.arange(n)
     return points @ affine[:2] + affine[2] + np.column_stack([np.interp(index, nodes, off[:, 0]), np.interp(index, nodes, off[:, 1])])
-
-
-def _from_rim(metres: Floats) -> Floats:
-    """Length along the line from where it passes the rim's level; a little below 0 or above it is carried on straight."""
-    s = arc_length(metres)
-    z = metres[:, 1]
-    k = min(12, s.size - 1)
-    if z[0] > 0:
-        rise = (z[k] - z[0]) / max(s[k], 1e-9)
-        return s + (z[0] / rise if rise > 0.3 else z[0])
-    above = np.nonzero(z >= 0)[0]
-    if above.size == 0 or above[0] == 0:
-        return s
-    i = int(above[0])
-    share = -z[i - 1] / max(z[i] - z[i - 1], 1e-12)
-    return s - (s[i - 1] + share * (s[i] - s[i - 1]))
 
 
 def _scatter_of_apexes(kept: list[_Kept], at_s: Floats) -> None:

@@ -7,13 +7,14 @@ every sight of a mark is one equation
     S(t) - M = sigma,
 
 S(t) the length paid out at the time that very place was seen, M the mark's place on the line. S is a cubic spline
-under a penalty on its third derivative whose weight the data choose (generalised cross-validation); marks of known
+under a penalty on its third derivative whose weight the data choose by leaving out whole stretches of frames in
+turn (neighbouring frames share errors, and leaving out single ones would take those for motion); marks of known
 spacing tie their M together, so that nothing drifts. The texture adds displacements known modulo its pitch. They
 join where the marks say beyond doubt which whole number of pitches belongs to them; without marks the speed is
 unwrapped from rest if the clip shows the rest, else it is given with its other candidates and called ambiguous.
 """
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Literal
 
 import numpy as np
@@ -33,6 +34,8 @@ _MOST_KNOTS = 500
 _REACH_FRAMES = 6  # a frame farther than this from any observation has no speed
 _U_PLACEMENT = 0.005  # relative, of one mark's place on the line where nothing else is said
 _MOST_ACCELERATION = 100.0  # m/s^2
+_POWERS = np.arange(-2.0, 5.01, 0.5)
+_BLOCK_FRAMES = 5
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -152,6 +155,7 @@ def _from_marks(
         alias = texture.pitch_m / float(np.median(np.diff(frame_s)))
         joined = _join(texture, fit)
         if joined is not None:
+            joined = replace(joined, u=np.hypot(joined.u, fit.common_error()))
             fit = _Fit(frame_s, rows, spacing_m, joined)
             fit.solve()
             pitch_ratio, u_pitch = 1.0 / (1.0 + fit.stretch), fit.u_stretch
@@ -267,8 +271,11 @@ class _Fit:
         d = np.diff(np.eye(self.size), n=3, axis=0)
         penalty[: self.size, : self.size] = d.T @ d
         weight = 1.0 / u**2
-        for _ in range(4):  # reweighted: a sight that belongs to another mark or to a glint must not pull
-            answer, normal = self._best(x, y, weight, penalty, held_x, held_y, held_u)
+        power = None
+        for turn in range(4):  # reweighted: a sight that belongs to another mark or to a glint must not pull
+            if turn in (0, 2):
+                power = self._power(x, y, weight, penalty, held_x, held_y, held_u, group)
+            answer, normal = self._solved(x, y, weight, 10.0**power * penalty, held_x, held_y, held_u)
             left = (y - x @ answer) / u
             scale = max(1.4826 * float(np.median(np.abs(left))), 1e-3)
             weight = np.minimum(1.0, 2.5 * scale / np.maximum(np.abs(left), 1e-12)) / u**2
@@ -301,7 +308,7 @@ class _Fit:
             x, y, u = np.concatenate([x, more]), np.concatenate([y, j.length]), np.concatenate([u, j.u])
             t = np.concatenate([t, j.t])
         period = (self.knots[1] - self.knots[0]) / _KNOT_FRAMES
-        return x, y, u, np.floor((t - self.start) / (5 * period)).astype(np.intp)
+        return x, y, u, np.floor((t - self.start) / (_BLOCK_FRAMES * period)).astype(np.intp)
 
     def _held(self) -> tuple[Floats, Floats, Floats]:
         """What is known beforehand: S = 0 at the start, the spacing of the marks, ratios near one."""
@@ -337,26 +344,39 @@ class _Fit:
                 out.append(row)
         return out
 
-    def _best(
+    def _power(
+        self, x: Floats, y: Floats, weight: Floats, penalty: Floats,
+        held_x: Floats, held_y: Floats, held_u: Floats, group: NDArray[np.intp],
+    ) -> float:  # fmt: skip
+        """Weight of the penalty (as a power of ten) that best foretells stretches of frames that were left out."""
+        folds = 4
+        scores = np.zeros(_POWERS.size)
+        for fold in range(folds):
+            out = group % folds == fold
+            if not out.any() or out.all():
+                continue
+            count = np.maximum(np.bincount(group[out], weight[out]), 1e-300)
+            for i, power in enumerate(_POWERS):
+                answer, _ = self._solved(x[~out], y[~out], weight[~out], 10.0**power * penalty, held_x, held_y, held_u)
+                left = weight[out] * (y[out] - x[out] @ answer)
+                scores[i] += float((np.bincount(group[out], left) ** 2 / count).sum())
+        return float(_POWERS[int(np.argmin(scores))])
+
+    def _solved(
         self, x: Floats, y: Floats, weight: Floats, penalty: Floats, held_x: Floats, held_y: Floats, held_u: Floats
     ) -> tuple[Floats, tuple[Floats, bool]]:
         xw = x * weight[:, None]
         a = x.T @ xw
         held_w = held_x / held_u[:, None] ** 2
-        fixed = a + held_x.T @ held_w + 1e-9 * np.eye(x.shape[1]) * max(float(np.trace(a)) / x.shape[1], 1.0)
-        right = xw.T @ y + held_w.T @ held_y
         base = float(np.trace(a[: self.size, : self.size])) / self.size
-        best = None
-        for power in np.arange(-3.0, 5.01, 0.5):
-            normal = cho_factor(fixed + 10.0**power * base * penalty)
-            answer = cho_solve(normal, right)
-            left = y - x @ answer
-            free = y.size - float(np.trace(cho_solve(normal, a)))
-            score = float((weight * left**2).sum()) / max(free - 0.4 * (y.size - free), 1.0) ** 2
-            if best is None or score < best[0]:
-                best = (score, answer, normal)
-        assert best is not None
-        return best[1], best[2]
+        tiny = 1e-9 * np.eye(x.shape[1]) * max(float(np.trace(a)) / x.shape[1], 1.0)
+        normal = cho_factor(a + held_x.T @ held_w + tiny + base * penalty)
+        return cho_solve(normal, xw.T @ y + held_w.T @ held_y), normal
+
+    def common_error(self) -> float:
+        """What all sights of a frame are off together [m]: the rim's crossing, which the texture shares with the marks."""
+        left = self.rows.sigma - (self.basis(self.rows.t) @ self.answer[: self.size] - self.answer[self.size + self.rows.track])
+        return 1.4826 * float(np.median(np.abs(left)))
 
     def at(self, t: Floats) -> tuple[Floats, Floats, Floats, Floats]:
         """Speed, its u, length paid out, its u, at the given times."""

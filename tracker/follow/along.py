@@ -23,7 +23,7 @@ __all__ = ["Along", "along_line", "carried_jump", "jitter"]
 
 Floats = NDArray[np.float64]
 
-_TANGENT_POINTS = 12
+_RIM_POINTS = 20  # behind those that the container touches, for the line's run through the rim's level
 _EVERY = 12  # points of the curve compared with the last frame's
 _DRIFT_FRAMES = 31  # window of a local parabola: slower changes are left to the rim itself, as carried errors add up
 
@@ -50,7 +50,9 @@ class Along:
     stretch: Floats
 
 
-def along_line(metres: Floats, move_m: Floats, normal: Floats, t_s: Floats, period_s: float) -> Along:
+def along_line(
+    metres: Floats, move_m: Floats, normal: Floats, t_s: Floats, period_s: float, touched: int = 0
+) -> Along:
     """Coordinate along the line of one frame.
 
     Parameters
@@ -65,9 +67,11 @@ def along_line(metres: Floats, move_m: Floats, normal: Floats, t_s: Floats, peri
         When each point was seen.
     period_s : float
         Time since the last frame.
+    touched : int
+        Number of points at the start whose place the container's edge may have drawn aside.
     """
     plain = arc_length(metres)
-    origin, z_slope = _rim(metres, plain)
+    origin, z_slope = _rim(metres, plain, touched)
     velocity = move_m / period_s
     moved = velocity[:, None] * normal
     tangent = np.gradient(metres, axis=0)
@@ -80,20 +84,31 @@ def along_line(metres: Floats, move_m: Floats, normal: Floats, t_s: Floats, peri
     return Along(metres, plain - origin + grown * t_s - timed, t_s, grown)
 
 
-def _rim(metres: Floats, plain: Floats) -> tuple[float, float]:
-    """Where along the points the rim's level is passed, carried on by the tangent, and the slope dz/ds there."""
+def _rim(metres: Floats, plain: Floats, touched: int) -> tuple[float, float]:
+    """Where along the points the rim's level is passed, and the slope dz/ds there.
+
+    Close to the container's edge the line's place is drawn aside, so a parabola through the points just
+    behind is followed down to the level; it may not bend more than the line does there.
+    """
     z = metres[:, 1]
-    k = min(_TANGENT_POINTS, z.size - 1)
-    c = np.polyfit(plain[: k + 1], z[: k + 1], 1)
-    slope = float(np.clip(c[0], 0.3, 1.0))
-    if z[0] > 0:
-        return -float(z[0]) / slope, slope
     above = np.nonzero(z >= 0)[0]
-    if above.size == 0 or above[0] == 0:
-        return 0.0, slope
-    i = int(above[0])
-    share = -z[i - 1] / max(z[i] - z[i - 1], 1e-12)
-    return float(plain[i - 1] + share * (plain[i] - plain[i - 1])), slope
+    if above.size and above[0] > touched:  # seen below the rim's level too
+        i = int(above[0])
+        share = -z[i - 1] / max(z[i] - z[i - 1], 1e-12)
+        near = slice(max(i - 6, 0), i + 6)
+        slope = float(np.polyfit(plain[near], z[near], 1)[0])
+        return float(plain[i - 1] + share * (plain[i] - plain[i - 1])), float(np.clip(slope, 0.3, 1.0))
+    top = int(np.argmax(z))
+    first = min(touched, top // 3)  # of a small arc there is no more to spare
+    last = min(first + int(np.clip(0.6 * (top - first), 5, _RIM_POINTS)), z.size)
+    s0 = plain[first]
+    degree = 2 if last - first >= 12 else 1
+    c2, c1, c0 = np.append(np.zeros(2 - degree), np.polyfit(plain[first:last] - s0, z[first:last], degree))
+    c1 = float(np.clip(c1, 0.3, 1.0))
+    c2 = float(np.clip(c2, -c1 / max(plain[last - 1] - s0, 1e-9), 0.0))
+    root = c1 * c1 - 4 * c2 * c0
+    s = -2 * c0 / (c1 + np.sqrt(root)) if root > 0 else -c0 / c1
+    return float(s0 + s), float(np.clip(c1 + 2 * c2 * s, 0.3, 1.0))
 
 
 def carried_jump(last: Along, now: Along, move_m: Floats, normal: Floats) -> float:

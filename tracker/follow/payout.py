@@ -233,7 +233,8 @@ class _Reader:
         pixel = np.hypot(tangent[:, 0], tangent[:, 1]) / np.maximum(np.hypot(*np.gradient(points, axis=0).T), 1e-9)
         normal = np.column_stack([-tangent[:, 1], tangent[:, 0]]) / np.maximum(np.hypot(*tangent.T), 1e-12)[:, None]
         move = line.move_px * pixel
-        here = along_line(metres, move, normal, t, period)
+        touched = round(0.5 * (self.follower.width_px + self.average_px)) + 1
+        here = along_line(metres, move, normal, t, period, touched)
         sigma = here.sigma_m
         if self.last_along is not None and self.last_along[0] == index - 1:
             kept.jump_m = carried_jump(self.last_along[1], here, move, normal)
@@ -245,6 +246,8 @@ class _Reader:
         window = 0.7 * spacing * self.px_per_m if spacing else 120.0
         where = np.arange(sigma.size)
         for at, height, length in see_marks(shown, line.seen, self.average_px, min(window, sigma.size / 2)):
+            if not 0.75 * length + self.average_px < at < sigma.size - 1 - 0.75 * length - self.average_px:
+                continue  # cut by the rim or by the border, its middle is not the mark's
             spot = np.array([np.interp(at, where, points[:, 0]), np.interp(at, where, points[:, 1])])
             u = 0.3 + 2.0 * self.background.noise * np.sqrt(max(length, 1.0)) / max(abs(height), 1.0)
             kept.sights.append(

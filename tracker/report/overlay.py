@@ -428,8 +428,9 @@ def _pieces(points: NDArray[np.float64]) -> Iterator[NDArray[np.float64]]:
     known = np.isfinite(points).all(axis=1)
     edges = np.flatnonzero(np.diff(np.concatenate(([0], known.astype(np.int8), [0]))))
     for start, stop in zip(edges[::2], edges[1::2], strict=True):
-        if stop - start > 1:
-            yield points[start:stop]
+        piece = points[start:stop]
+        # A lone point has no length to draw: it becomes a dash of a pixel.
+        yield piece if len(piece) > 1 else piece + np.array([[-0.5, 0.0], [0.5, 0.0]])
 
 
 def _shape(picture: Grey, centre: NDArray[np.float64], outline: NDArray[np.float64], colour: str) -> None:

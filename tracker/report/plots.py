@@ -31,6 +31,7 @@ __all__ = ["Plot", "draw"]
 Floats = NDArray[np.float64]
 SIZE_IN = (4.8, 3.7)
 BAND_K = 2.0
+MM = 1000.0  # millimetres in a metre
 MOST_BARS = 9
 PNG_DPI = 150
 LABEL_APART = 0.085  # of the height of a plot
@@ -275,23 +276,26 @@ def _name_ends(axes: Axes, ends: Sequence[tuple[float, float, str, str]]) -> Non
 
 
 def _residuals(axes: Axes, course: _Course, name: str, curve: Floats) -> None:
-    factor, unit = 1000.0, "mm"
-    known = curve[np.isfinite(curve).all(axis=1)]
-    known = known[np.argsort(known[:, 0])]
-
-    def less(t: Floats, value: Floats) -> Floats:
-        return np.asarray(factor * (value - np.interp(t, known[:, 0], known[:, 1], left=np.nan, right=np.nan)), dtype=float)
-
     _windows(axes, course, named=False)
     colour, dash = _look(name)
-    axes.plot(known[:, 0], 0 * known[:, 0], color=colour, linestyle=dash, zorder=1.5)
-    _data(axes, course.t, less(course.t, course.value), factor * course.u, course.flags)
+    axes.plot(curve[:, 0], 0 * curve[:, 0], color=colour, linestyle=dash, zorder=1.5)
+    _data(axes, course.t, _less_mm(course.t, course.value, curve), MM * course.u, course.flags)
     ends = []
     for other, line_of in course.models.items():
         if other != name:
-            ends.append(_model_line(axes, other, np.column_stack([line_of[:, 0], less(line_of[:, 0], line_of[:, 1])])))
-    axes.set_ylabel(f"measured\n− {'fit' if name.startswith('quadratic') else name} / {unit}")
+            off = np.column_stack([line_of[:, 0], _less_mm(line_of[:, 0], line_of[:, 1], curve)])
+            ends.append(_model_line(axes, other, off))
+    axes.set_ylabel(f"measured\n− {'fit' if name.startswith('quadratic') else name} / mm")
     _name_ends(axes, ends)
+
+
+def _less_mm(t: Floats, value: Floats, curve: Floats) -> Floats:
+    """Values less a curve [mm]; NaN outside the times that the curve covers."""
+    known = curve[np.isfinite(curve).all(axis=1)]
+    known = known[np.argsort(known[:, 0])]
+    if not len(known):
+        return np.full(len(t), np.nan)
+    return np.asarray(MM * (value - np.interp(t, known[:, 0], known[:, 1], left=np.nan, right=np.nan)), dtype=float)
 
 
 def _path(result: Result) -> Plot | None:
@@ -397,7 +401,10 @@ def _told(course: _Course, finding: str, base: tuple[str, Floats] | None) -> str
     if course.models:
         parts.append("curves: " + ", ".join(course.models))
     if base is not None:
-        parts.append(f"below, measured minus {base[0]}")
+        off = _less_mm(course.t, course.value, base[1])[~course.flags]
+        off = off[np.isfinite(off)]
+        size = f", {off.min():.1f} to {off.max():.1f} mm where nothing is flagged" if len(off) else ""
+        parts.append(f"below, measured minus {base[0]}{size}")
     return "; ".join(parts) + "."
 
 

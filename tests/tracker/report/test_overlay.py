@@ -119,6 +119,22 @@ def test_a_scaled_picture_keeps_places(made: Demo) -> None:
     np.testing.assert_allclose((found.min(axis=0) + found.max(axis=0)) / 2, [350.25, 700.25], atol=0.75)
 
 
+def test_an_enlarged_picture_keeps_places(made: Demo) -> None:
+    """Four times the size: column c lands at 4 (c + 0.5) - 0.5; a shift of half a small pixel would be 1.5 large ones."""
+    mark = FrameMark(0, 0.0, end_px=(40.0, 100.0))
+    result = dataclasses.replace(made.result, marks=(mark,), origin_px=(np.nan, np.nan), scale_px_per_m=np.nan)
+    picture = Painter(result, (90, 160)).paint(0, np.full((160, 90), 128, np.uint8))
+    found = coloured(picture[:640], "end")
+    np.testing.assert_allclose((found.min(axis=0) + found.max(axis=0)) / 2, [161.5, 401.5], atol=0.75)
+
+
+def test_a_lone_point_between_gaps_is_still_shown(made: Demo) -> None:
+    gap = [np.nan, np.nan]
+    points = np.array([gap, [200, 300], gap, [300, 300], [400, 300]], np.float32)
+    picture = with_mark(made, FrameMark(0, 0.0, line_px=points)).paint(0, GREY)
+    assert (picture[295:306, 195:206] != 128).any() and (picture[295:306, 245:256] == 128).all()
+
+
 def test_drawings_do_not_reach_into_the_numbers(made: Demo) -> None:
     quiet, loud = FrameMark(0, 0.0), FrameMark(0, 0.0, end_px=(300.0, 1279.0), line_px=np.array([[10, 1200], [10, 1400]], np.float32))
     strips = [with_mark(made, mark).paint(0, GREY)[1284:] for mark in (quiet, loud)]

@@ -40,6 +40,13 @@ def test_attitude_means_what_it_says(attitude, where):
         assert top[0] < camera.cx - 10 and top[1] < camera.cy
 
 
+def test_yaw_is_done_first_then_pitch_then_roll():
+    yaw, pitch = np.deg2rad([30.0, 20.0])
+    forward = [np.sin(yaw) * np.cos(pitch), np.cos(yaw) * np.cos(pitch), np.sin(pitch)]  # azimuth and elevation
+    np.testing.assert_allclose(Camera(yaw_deg=30.0, pitch_deg=20.0, roll_deg=40.0).rotation[2], forward, atol=1e-12)
+    assert Camera(yaw_deg=30.0, pitch_deg=20.0).rotation[0, 2] == 0  # the picture's rows stay level until it is rolled
+
+
 def test_rotation_is_a_rotation_and_the_picture_is_not_mirrored():
     assert np.linalg.det(CROOKED.rotation) == pytest.approx(1.0, abs=1e-12)
     right, up = Camera().project([[0.1, 0, 0], [0, 0, 0.1]])

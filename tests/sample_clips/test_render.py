@@ -77,22 +77,26 @@ def test_a_still_ball_is_where_it_projects(where):
 def test_a_still_ball_takes_the_light_of_its_area():
     ball = Thrown((0.02, 0.0, 0.01))
     area = np.pi * (0.012 * CAMERA.fx) ** 2  # at depth 1 m
-    assert change(ball).sum() == pytest.approx(area * (0.5 - 0.05), rel=0.01)
+    weight = change(ball)
+    assert weight.sum() == pytest.approx(area * (0.5 - 0.05), rel=0.003)
+    assert weight.max() == pytest.approx(0.45, rel=1e-4)  # its middle is opaque
 
 
 def test_a_wide_ball_off_the_axis_is_the_ellipse_of_its_cone():
     """Rays brute force: a pixel is covered where its ray passes the centre nearer than the radius."""
-    camera = replace(CAMERA, fx=300.0, fy=300.0)
-    centre, radius = np.array([0.25, 0.0, 0.3]), 0.08
-    found = centroid(change(Thrown(centre, radius=radius), camera))
+    camera = replace(CAMERA, fx=150.0, fy=150.0)
+    centre, radius = np.array([0.4, 0.0, 0.6]), 0.2
+    weight = change(Thrown(centre, radius=radius), camera)
+    found = centroid(weight)
     column, row = np.meshgrid(np.arange(1200) / 5 - 0.4, np.arange(1600) / 5 - 0.4)
-    rays = np.stack([(column - camera.cx) / 300, np.ones_like(row), -(row - camera.cy) / 300], axis=-1)
+    rays = np.stack([(column - camera.cx) / 150, np.ones_like(row), -(row - camera.cy) / 150], axis=-1)
     to_centre = centre - np.array(camera.position_m)
     along = (rays @ to_centre) / (rays**2).sum(axis=-1)
     covered = ((along[..., None] * rays - to_centre) ** 2).sum(axis=-1) < radius**2
     expected = [column[covered].mean(), row[covered].mean()]
     assert np.linalg.norm(expected - camera.project(centre)) > 0.3  # the effect is there
     np.testing.assert_allclose(found, expected, atol=0.02)
+    assert weight.sum() / 0.45 == pytest.approx(covered.sum() / 25, rel=1e-3)
 
 
 def test_a_bead_is_where_it_projects():
@@ -413,6 +417,41 @@ def test_a_box_covers_its_outline():
     px = CAMERA.project([[x, -0.02, z] for x in (-0.05, 0.06) for z in (-0.03, 0.07)])
     extent = px.max(axis=0) - px.min(axis=0)
     assert front.sum() == pytest.approx(extent[0] * extent[1], rel=0.005)
+
+
+def test_a_slanted_edge_is_resolved_as_finely_as_a_straight_one():
+    """A square sheet stood on its corner: its width grows by two pixels a row."""
+    sheet = Print(np.full((10, 10), 255, np.uint8), 0.2, (0.0113, 0, 0.0047), turn_deg=45.0)
+    widths = trace(Scenery(PLAIN, EVEN, (sheet,)), CAMERA).front.astype(float).sum(axis=1)
+    middle = CAMERA.project(sheet.centre_m)[1]
+    expected = 2 * (0.2 / 2**0.5 * CAMERA.fx - np.abs(np.arange(320) - middle))
+    inside = (expected > 4) & (np.abs(np.arange(320) - middle) > 1)
+    np.testing.assert_allclose(widths[inside], expected[inside], atol=0.06)
+
+
+def test_faces_are_lit_by_their_slope_to_the_lamp():
+    lamp = Light(towards=(-2.0, -1.0, 2.0), ambient=0.3, lamp=0.9)
+    box = Box((-0.1, 0.0, -0.2), (0.1, 0.3, -0.1), 0.6)
+    light = trace(Scenery(PLAIN, lamp, (box,)), CAMERA).light
+    for place, slope in (((0, 0, -0.15), 1 / 3), ((0, 0.1, -0.1), 2 / 3)):  # the front, and the top
+        column, row = np.rint(CAMERA.project(place)).astype(int)
+        assert light[row, column] == pytest.approx(0.6 * (0.3 + 0.9 * slope), rel=1e-5)
+
+
+def test_a_container_has_its_radii():
+    cup = Container((0, 0, 0), 0.06, 0.04, 0.1)
+    widths = trace(Scenery(PLAIN, EVEN, (cup,)), CAMERA).front.astype(float).sum(axis=1)
+    rim, base = CAMERA.project([[0, 0, -0.002], [0, 0, -0.099]])[:, 1].astype(int)
+    assert widths[rim] == pytest.approx(2 * CAMERA.fx * 0.06 / np.sqrt(1 - 0.06**2), rel=0.01)
+    assert widths[base] == pytest.approx(2 * CAMERA.fx * 0.04 / np.sqrt(1 - 0.04**2), rel=0.02)
+    assert widths[rim - 6] == 0
+
+
+def test_the_first_square_of_a_board_is_black():
+    board = Board((3, 2), 0.05, centre_m=(0, 0, 0), margin_m=0.01)
+    light = trace(Scenery(PLAIN, EVEN, (board,)), CAMERA).light
+    first, second = (np.rint(CAMERA.project([x, 0, 0.05])).astype(int) for x in (-0.075, -0.025))
+    assert light[first[1], first[0]] == pytest.approx(board.black) and light[second[1], second[0]] == pytest.approx(board.white)
 
 
 def test_a_thing_throws_its_shadow_away_from_the_lamp():

@@ -84,6 +84,21 @@ def test_board_behind_the_plane_scales_as_similar_triangles():
     assert behind.distance_m == pytest.approx(2.20, abs=1e-4)
 
 
+@pytest.mark.parametrize(("attitude", "turn"), [
+    ({"lean_deg": 10.0}, (-np.radians(10), 0, 0)),  # the board's top away from the camera: its bottom comes nearer
+    ({"yaw_deg": 10.0}, (0, -np.radians(10), 0)),  # its right side away
+])
+def test_a_board_known_to_stand_askew_does_not_tilt_the_plane(attitude, turn):
+    """A camera square to the plane of motion sees the board lean: with the lean told, the plane is square again."""
+    find = seen_board(turn=turn, place=(0.1, 0.05, 1.5))
+    told = dict(lens=exact_lens(), distance_m=None, origin_px=(350.0, 600.0))
+    assert fit(find, **told).tilt_deg == pytest.approx(10.0, abs=0.01)
+    plane = fit(find, **attitude, **told)
+    assert plane.tilt_deg == pytest.approx(0.0, abs=0.01)
+    rows = plane.to_metres([[350.0, 100.0], [350.0, 600.0], [350.0, 1100.0]])[:, 1]
+    assert rows[0] - rows[1] == pytest.approx(rows[1] - rows[2], rel=1e-4)  # one scale from top to bottom
+
+
 @pytest.mark.parametrize(("name", "changes"), [
     ("offset", {"offset_m": 0.02 + 1e-4}), ("lean", {"lean_deg": 0.02}), ("yaw", {"yaw_deg": 0.02}),
     ("distance", {"distance_m": 1.5 * 1.004})])

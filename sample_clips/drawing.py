@@ -101,7 +101,8 @@ def draw(
             paint_line(canvas, line, at, camera, shade, style)
         if beads is not None:
             paint_beads(canvas, beads, seen[len(lines)], camera, shade, style)
-        if balls:
+        if balls:  # they hide the line's end that is tied to them
+            canvas.close_layer()
             _paint_seen_balls(canvas, camera, knots, balls, centres, tracks[-1], seen[-1], shade)
         canvas.close_moment(1 / moments)
     cast = _cast_shadow(camera, scenery, knots, frame_s, lines, beads, balls, centres)

@@ -82,7 +82,7 @@ def _round(radius: Singles, distance: Singles) -> Singles:
 
 
 class Canvas:
-    """A window of the picture in which cover and light of one moment are summed, and the mean over moments is kept."""
+    """A window of the picture: things of a layer share a pixel, each layer of a moment lies over those before, moments are averaged."""
 
     def __init__(self, window: tuple[slice, slice], front: Singles, depth_m: Singles) -> None:
         self.row0, self.column0 = window[0].start, window[1].start
@@ -90,6 +90,7 @@ class Canvas:
         self.shape = self.front.shape
         self.cover, self.glow = np.zeros(self.shape), np.zeros(self.shape)
         self.moment_cover, self.moment_glow = np.zeros(self.shape), np.zeros(self.shape)
+        self.layer_cover, self.layer_glow = np.zeros(self.shape), np.zeros(self.shape)
 
     def add(self, column: NDArray[np.intp], row: NDArray[np.intp], cover: Singles, light: Singles, depth: Singles) -> None:
         """Paint places of equal shape; what lies behind things of the still scene is held back."""
@@ -99,14 +100,26 @@ class Canvas:
         cover = cover * (1 - np.where(depth > self.behind[i, j], self.front[i, j], np.float32(0)))
         flat = i * self.shape[1] + j
         size = self.shape[0] * self.shape[1]
-        self.moment_cover += np.bincount(flat, cover, size).reshape(self.shape)
-        self.moment_glow += np.bincount(flat, cover * light, size).reshape(self.shape)
+        self.layer_cover += np.bincount(flat, cover, size).reshape(self.shape)
+        self.layer_glow += np.bincount(flat, cover * light, size).reshape(self.shape)
+
+    def close_layer(self) -> None:
+        """Lay what was added over this moment's earlier layers."""
+        over = np.maximum(self.layer_cover, 1.0)
+        self.layer_cover /= over
+        self.layer_glow /= over
+        self.moment_cover *= 1 - self.layer_cover
+        self.moment_cover += self.layer_cover
+        self.moment_glow *= 1 - self.layer_cover
+        self.moment_glow += self.layer_glow
+        self.layer_cover[...] = 0
+        self.layer_glow[...] = 0
 
     def close_moment(self, share: float) -> None:
-        """Add this moment with its share of the exposure; where things overlap, they share the pixel."""
-        over = np.maximum(self.moment_cover, 1.0)
-        self.cover += share * (self.moment_cover / over)
-        self.glow += share * (self.moment_glow / over)
+        """Add this moment with its share of the exposure."""
+        self.close_layer()
+        self.cover += share * self.moment_cover
+        self.glow += share * self.moment_glow
         self.moment_cover[...] = 0
         self.moment_glow[...] = 0
 

@@ -288,6 +288,18 @@ def test_a_line_leaves_the_container_over_its_near_wall():
     assert rows[int(rim) - 3] > 0.5
 
 
+def test_a_ball_hides_the_line_that_is_tied_to_it():
+    class Tied(Thrown):
+        def bars(self, t):
+            return Bars(np.array([[0, 0, 0.0]]), np.array([[0.1, 0, 0]]), np.array([0.004]), np.array([0.9]), 0.0)
+
+    alone, tied = change(Thrown((0, 0, 0), radius=0.02)), change(Tied((0, 0, 0), radius=0.02))
+    column, row = np.rint(CAMERA.project([0.01, 0, 0])).astype(int)
+    assert tied[row, column] == pytest.approx(alone[row, column], abs=1e-6)
+    column = int(CAMERA.project([0.06, 0, 0])[0])
+    assert tied[row, column] == pytest.approx(0.5 - 0.9, abs=1e-3)
+
+
 def test_a_line_flagged_as_hidden_is_not_drawn():
     style = LineStyle(kind="cable", radius_m=0.003, albedo=0.05)
     assert not change(Straight((-0.3, 0, 0), (0.3, 0, 0), visible=False), style=style).any()

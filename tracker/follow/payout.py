@@ -333,13 +333,10 @@ class _Reader:
                 kept.frame, line, kept.u_line_px, _NAN2, _NAN2, np.nan, t, np.nan, np.nan, np.nan,
                 np.full((2, 2), np.nan), at, tuple(flags),
             )  # fmt: skip
-        up = float(light.vector_px @ self.up)
-        outward = np.sign(arc.legs_px[1, 0] - arc.legs_px[0, 0]) * np.array([1.0, 0.0])
-        wider = 0.0  # both legs are moved the same way by one lamp: the width stays
-        del outward
+        up = float(light.vector_px @ self.up)  # one lamp moves both legs the same way: the width stays
         return PayoutFrame(
             kept.frame, line, kept.u_line_px, arc.apex_px + up * self.up, arc.apex_m + [0.0, up / self.px_per_m],
-            kept.u_apex_m, t, arc.width_m + wider, arc.radius_m, arc.u_radius_m, arc.legs_px, at, tuple(flags),
+            kept.u_apex_m, t, arc.width_m, arc.radius_m, arc.u_radius_m, arc.legs_px, at, tuple(flags),
         )  # fmt: skip
 
     def _notices(self, kept: list[_Kept], speed: SpeedSeries, tracks: list[MarkTrack]) -> tuple[Notice, ...]:
@@ -400,7 +397,10 @@ def _metres(plane: _Plane, points: Floats) -> Floats:
 
 
 def _scatter_of_apexes(kept: list[_Kept], at_s: Floats) -> None:
-    """Raise each frame's u to what the apexes of neighbouring frames show about a smooth course."""
+    """Set each frame's u by what the apexes of neighbouring frames show about a smooth course.
+
+    The points' own noise, counted as if their shared part were all, is too large by up to two: half of it is the floor.
+    """
     have = np.array([i for i, k in enumerate(kept) if k.arc is not None], dtype=np.intp)
     if have.size < 12:
         return
@@ -411,7 +411,7 @@ def _scatter_of_apexes(kept: list[_Kept], at_s: Floats) -> None:
         return
     scatter = 1.4826 * float(np.median(np.abs(third[whole]))) / np.sqrt(20.0)  # 1 + 9 + 9 + 1
     for i in have:
-        kept[i].u_apex_m = max(kept[i].u_apex_m, scatter)
+        kept[i].u_apex_m = max(0.5 * kept[i].u_apex_m, scatter)
 
 
 def _marks_by_frame(tracks: list[MarkTrack]) -> dict[int, list[Floats]]:

@@ -17,6 +17,7 @@ __all__ = ["ProfilePool", "SideLight", "Template", "bar_profile", "fit_centres",
 
 _MOST_SHIFT = 0.8  # px: the fit is linear about its start, farther than this it must start again
 _SECTORS = 24  # directions of the normal apart in the pool
+_LEAST_DOUBT_PX = 0.1  # of the place of an edge against the body's own, whatever the light
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -200,7 +201,9 @@ def side_light(pool: ProfilePool) -> SideLight:
     left = offset - design @ vector
     spread = float(np.sqrt((weight * left**2).sum() / weight.sum()))
     typical = float((weight * u).sum() / weight.sum())
-    return SideLight(vector, float(np.hypot(max(spread, typical), 0.05)))
+    # A flank as bright as the scene behind it hides its edge, and the correction then stops short: half of it is in doubt.
+    doubt = np.hypot(_LEAST_DOUBT_PX, 0.5 * float(np.hypot(*vector)))
+    return SideLight(vector, float(np.hypot(max(spread, typical), doubt)))
 
 
 def side_light_offset(offset_px: NDArray[np.float64], profile: NDArray[np.float64]) -> tuple[float, float]:

@@ -16,6 +16,7 @@ from typing import Literal
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
+from scipy.optimize import minimize_scalar
 
 from calibration.notice import BadInput, CannotMeasure, Notice
 
@@ -30,6 +31,11 @@ SAME_RATE = 0.002  # rates closer than this are one rate: 240 and 239.76 differ 
 CLOSE_RATE = 0.02  # up to here a disagreement is said and enters u; beyond, it is a contradiction
 STRETCH = 1.4  # capture over stamp rate from here on is slow motion: 24 fps made of 30 is 1.25
 ORDINARY_RATE = 61.0  # per second; stamps of this rate or less may be stretched slow motion
+LEAP = 1.6  # usual steps of this ratio are different speeds: above 3:2 pull-down, below a halving
+LASTING = 6  # steps; what lasts shorter is a row of gaps
+OFF_GRID = 0.75  # ticks; rounding moves a stamp by half a tick, the rest is let pass as jitter too small to keep
+COARSE = 4.0  # ticks a step; below, a gap of several steps fits two counts
+MANY_GAPS = 12  # that are worth counting again
 GAP = 1.5  # a step this many usual steps long is a gap
 IMPOSSIBLE_READOUT = 1.02  # of a frame period
 
@@ -247,6 +253,8 @@ class _Steps:
 
     @classmethod
     def of(cls, stamps: NDArray[np.int64], time_base: Fraction) -> "_Steps":
+        if (plain := _Steps._rounded_only(stamps, float(time_base))) is not None:
+            return plain
         spread, repeats = _spread_repeats(stamps)
         step = np.diff(spread)
         usual, ramped = _usual_steps(step)
@@ -257,8 +265,24 @@ class _Steps:
         whole = (np.abs(ratio - periods) <= np.maximum(min(0.25, 0.02 + 4 * scatter), 1.51 / usual)) | (ratio < GAP)
         period, u_period, grid, jitter = float(usual.min()), 0.0, None, 0.0
         if not ramped:
-            period, u_period, grid, jitter = _fit_grid(spread, step, periods, whole)
+            (period, u_period, grid, jitter), periods = _fit_counted(spread, step, periods, whole)
         return cls(spread, step, usual, periods, whole, repeats, ramped, grid, period, u_period, jitter, float(time_base))
+
+    @classmethod
+    def _rounded_only(cls, stamps: NDArray[np.int64], tick_s: float) -> "_Steps | None":
+        """The steps if one regular grid without any gap explains them by rounding alone, else None.
+
+        It is asked first: on ticks as coarse as the steps (480 frames a second in 1/600 s) a step of two ticks is
+        neither a gap nor a repeat.
+        """
+        n = len(stamps)
+        one, yes = np.ones(n - 1, dtype=np.int64), np.ones(n - 1, dtype=bool)
+        step = np.diff(stamps).astype(float)
+        period, u_period, grid, jitter = _fit_grid(stamps.astype(float), step, one, yes)
+        if grid is None:
+            return None
+        none = np.array([], dtype=np.int64)
+        return cls(grid, step, np.full(n - 1, period), one, yes, none, False, grid, period, u_period, jitter, tick_s)
 
     @property
     def rate(self) -> float:
@@ -362,48 +386,77 @@ def _usual_steps(step: Array) -> tuple[Array, bool]:
     """The usual step around each step, and whether there are several: a ramp.
 
     A running median over five steps passes over single gaps and keeps changes that last. It splits into levels
-    where its sorted values leap by more than 1.6; levels that do not last are gaps, not a ramp.
+    where its sorted values leap by more than 1.6; a level that nowhere lasts is a row of gaps, no part of a ramp.
     """
     one = np.full(len(step), _usual(step))
-    if len(step) < 6:
+    if len(step) < 2 * LASTING:
         return one, False
     around = np.median(np.lib.stride_tricks.sliding_window_view(np.pad(step, 2, mode="reflect"), 5), axis=1)
-    if around.max() / around.min() <= 1.6:
+    if around.max() <= max(LEAP * around.min(), around.min() + 2.01):  # rounding alone makes 3 ticks of 5
         return one, False
     order = np.sort(around)
-    leaps = np.flatnonzero(order[1:] > 1.6 * order[:-1])
-    bounds = (order[leaps] + order[leaps + 1]) / 2
-    level = np.searchsorted(bounds, around)
+    leaps = np.flatnonzero(order[1:] > np.maximum(LEAP * order[:-1], order[:-1] + 2.01))
     if len(leaps) == 0:  # a ramp without a leap: the rate glides
         return around, True
-    if (np.diff(level) != 0).sum() + 1 > len(step) / 4:
+    level = np.searchsorted((order[leaps] + order[leaps + 1]) / 2, around)
+    lasting = [k for k in range(len(leaps) + 1) if _longest_run(level == k) >= LASTING]
+    if len(lasting) < 2 or (np.diff(level) != 0).sum() + 1 > len(step) / 4:
         return one, False
-    values = np.array([_usual(step[level == k]) for k in range(len(bounds) + 1)])
-    own = values[level]
+    fits = np.isin(level, lasting)
+    level = level[np.maximum.accumulate(np.where(fits, np.arange(len(level)), fits.argmax()))]
+    value = {k: _usual(step[level == k]) for k in lasting}
+    own = np.array([value[k] for k in level.tolist()])
     beside = np.stack([np.append(own[:1], own[:-1]), own, np.append(own[1:], own[-1:])])  # a change falls between runs
     nearest = np.abs(np.log(step / beside)).argmin(axis=0)
     return beside[nearest, np.arange(len(step))], True
 
 
+def _longest_run(flags: NDArray[np.bool_]) -> int:
+    edges = np.flatnonzero(np.diff(np.concatenate([[0], flags.astype(np.int8), [0]])))
+    return int((edges[1::2] - edges[::2]).max(initial=0))
+
+
 def _usual(step: Array) -> float:
     """The usual step: the mean of those within rounding and 30 % of the median, or of the shorter ones if many
     frames were dropped."""
-    middle = float(np.median(step))
+    middle = float(np.quantile(step, 0.5, method="lower"))  # one of them, not between two
     short = step[step < 0.7 * middle]
     if len(short) > 0.15 * len(step) and middle > 4:
-        multiple = middle / float(np.median(short))
-        if abs(multiple - round(multiple)) < 0.15:
-            middle = float(np.median(short))
+        shorter = float(np.quantile(short, 0.5, method="lower"))
+        if abs(middle / shorter - round(middle / shorter)) < 0.15:
+            middle = shorter
     return float(step[np.abs(step - middle) <= max(1.0, 0.3 * middle)].mean())
+
+
+def _fit_counted(
+    stamps: Array, step: Array, periods: NDArray[np.int64], whole: NDArray[np.bool_]
+) -> tuple[tuple[float, float, Array | None, float], NDArray[np.int64]]:
+    """`_fit_grid`, with the count of each gap put right where ticks are so coarse that a gap fits two counts."""
+    best = _fit_grid(stamps, step, periods, whole)
+    gaps = np.flatnonzero(whole & (periods > 1))
+    if best[0] > COARSE or len(gaps) > MANY_GAPS:
+        return best, periods
+    for i in gaps:
+        for other in (-1, 1):
+            if best[2] is not None:
+                return best, periods
+            counted = periods.copy()
+            counted[i] += other
+            fit = _fit_grid(stamps, step, counted, whole)
+            if fit[2] is not None or fit[3] < best[3]:
+                best, periods = fit, counted
+    return best, periods
 
 
 def _fit_grid(
     stamps: Array, step: Array, periods: NDArray[np.int64], whole: NDArray[np.bool_]
 ) -> tuple[float, float, Array | None, float]:
-    """Least-squares period of stamps on a grid, with a phase of its own after each odd gap.
+    """Period of stamps on a grid, with a phase of its own after each odd gap.
 
     Returns period [ticks], its relative u, the grid or None if stamps lie off it by more than rounding can, and the
-    scatter beyond rounding [ticks].
+    scatter beyond rounding [ticks]. Where rounding alone explains the stamps, the period is the middle of those that
+    rounding allows: errors of rounding are no random draws (steps of 5.005 ticks are 5, 5, 5 ... 6), so that least
+    squares would be too sure of itself.
     """
     part = np.concatenate([[0], np.cumsum(~whole)])
     count = np.concatenate([[0], np.cumsum(np.where(whole, periods, 0))]).astype(float)
@@ -414,13 +467,44 @@ def _fit_grid(
     if spread == 0:
         return float(np.median(step)), 0.5, None, 0.0
     period = float(((count - centre) * (stamps - level)).sum() / spread)
-    grid = level + period * (count - centre)
-    off = stamps - grid
+    off = stamps - level - period * (count - centre)
     scatter = float(np.sqrt((off**2).sum() / max(1, len(off) - members.size - 1)))
     u_period = max(1 / np.sqrt(12), scatter) / np.sqrt(spread) / period
-    if np.abs(off).max() > 0.75:
+    if (allowed := _allowed_by_rounding(stamps, count, part, period)) is not None:
+        low, high = allowed
+        period, u_period = (low + high) / 2, (high - low) / np.sqrt(12) / period
+        off = stamps - period * count
+        ends = [(off[part == k].min() + off[part == k].max()) / 2 for k in range(members.size)]
+        return period, u_period, np.array(ends)[part] + period * count, 0.0
+    if np.abs(off).max() > OFF_GRID:
         return period, u_period, None, scatter
-    return period, u_period, grid, float(np.sqrt(max(0.0, scatter**2 - 1 / 12)))
+    return period, u_period, level + period * (count - centre), float(np.sqrt(max(0.0, scatter**2 - 1 / 12)))
+
+
+def _allowed_by_rounding(stamps: Array, count: Array, part: NDArray[np.int64], near: float) -> tuple[float, float] | None:
+    """Smallest and largest period with which every stamp lies within one tick's width of its grid, by bisection.
+
+    The width of the band that holds all stamps is a convex function of the period.
+    """
+    starts = np.flatnonzero(np.diff(part, prepend=-1))
+
+    def width(period: float) -> float:
+        off = stamps - period * count
+        return float((np.maximum.reduceat(off, starts) - np.minimum.reduceat(off, starts)).max())
+
+    reach = 2.0 / float(np.ptp(count))
+    found = minimize_scalar(width, bounds=(near - reach, near + reach), method="bounded", options={"xatol": reach * 1e-9})
+    best = float(found.x)
+    if width(best) > 1 + 1e-9:
+        return None
+    ends = []
+    for side in (-reach, reach):
+        inside, outside = best, best + 2 * side
+        for _ in range(60):
+            middle = (inside + outside) / 2
+            inside, outside = (middle, outside) if width(middle) <= 1 + 1e-9 else (inside, middle)
+        ends.append(inside)
+    return ends[0], ends[1]
 
 
 def _many(count: int, noun: str) -> str:
@@ -655,17 +739,15 @@ def hidden_steps(difference: ArrayLike, track: ArrayLike | None = None) -> Hidde
 
 
 def _repeated_pictures(change: Array, reach: int = 7) -> NDArray[np.int64]:
-    """Steps whose change is below a quarter of the local median and far outside its scatter."""
+    """Steps whose change is below a quarter of the local median and below half of any other around it."""
     if len(change) < 5:
         return np.array([], dtype=np.int64)
-    window = min(2 * reach + 1, len(change) - (len(change) + 1) % 2)
-    half = window // 2
-    padded = np.pad(change, half, mode="reflect")
-    around = np.lib.stride_tricks.sliding_window_view(padded, window)
-    usual = np.median(around, axis=1)
-    scatter = 1.4826 * np.median(np.abs(around - usual[:, None]), axis=1)
-    still = usual <= 0  # pictures without noise: nothing tells a repeat from rest
-    return np.flatnonzero(~still & (change < 0.25 * usual) & (change < usual - 4 * scatter))
+    padded = np.pad(change, reach, constant_values=np.nan)
+    around = np.lib.stride_tricks.sliding_window_view(padded, 2 * reach + 1)
+    usual = np.nanmedian(around, axis=1)
+    low = change < 0.25 * usual  # never where pictures have no noise: nothing tells a repeat from rest there
+    others = np.lib.stride_tricks.sliding_window_view(np.pad(np.where(low, np.nan, change), reach, constant_values=np.nan), 2 * reach + 1)
+    return np.flatnonzero(low & (change < 0.5 * np.nanmin(others, axis=1, initial=np.inf)))
 
 
 def _leaps(place: Array, repeated: NDArray[np.int64], reach: int = 4) -> tuple[NDArray[np.int64], NDArray[np.int64]]:

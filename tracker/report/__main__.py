@@ -12,7 +12,7 @@ from tracker.report.folder import write_folder
 def main(arguments: list[str] | None = None) -> int:
     """Write it and say where; 2 where it cannot be written."""
     parser = argparse.ArgumentParser(prog="python -m tracker.report", description=__doc__)
-    parser.add_argument("folder", type=Path, nargs="?", default=Path("harrow-point-demo"))
+    parser.add_argument("folder", type=Path, nargs="?", default=Path("harrow-point-results"))
     parser.add_argument("--kind", choices=sorted(DEMOS), default="payout")
     parser.add_argument("--frames", type=int, default=240, help="how many frames to invent")
     parser.add_argument("--replace", action="store_true")

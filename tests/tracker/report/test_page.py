@@ -150,6 +150,7 @@ def test_trail_cautions_and_the_limit_of_what_it_says(html: str, made: Demo) -> 
         "Linefall measures footage; it does not certify lifting or mooring gear.",
         "local codes and qualified staff decide", "drop zone", "bight", "eye and face protection", "Tie no line to a person",
         "capture_fps = 240.0", "datum.u_origin_px 1.5 px: a point placed by hand on the picture", "None: no point was moved by hand.",
+        "u(readout) 0.0004 s",  # small u: a capital would be another quantity
         "numpy", "Measured by Checked by Date", "invented for the fictional Harrow Point line-test bench",
     ):  # fmt: skip
         assert words in text, words

@@ -109,6 +109,16 @@ def quantity(
         low, high = interval
         big_u = max(value - low, high - value)
     return Quantity(
-        value=float(value), unit=unit, u=u, U=float(big_u), k=k, dof=dof, interval=(float(low), float(high)),
-        u_run=float(np.sqrt(own.sum())), window_s=window_s, definition=definition, budget=ordered, extra=extra or {},
+        value=float(value),
+        unit=unit,
+        u=u,
+        U=float(big_u),
+        k=k,
+        dof=dof,
+        interval=(float(low), float(high)),
+        u_run=float(np.sqrt(own.sum())),
+        window_s=window_s,
+        definition=definition,
+        budget=ordered,
+        extra=extra or {},
     )

@@ -1,0 +1,188 @@
+"""Least squares whose uncertainty survives correlated residuals.
+
+Errors of neighbouring frames are alike: the same edge pixels, the same compression, the same light. A fit that takes
+them for independent gives too small an uncertainty. Here the noise of a series is described by its standard deviation
+and a first-order autoregression, both estimated from what a smooth curve leaves, and pushed through the estimator:
+u^2 = row R row', R the covariance of the errors (JCGM 100:2008, 5.2.2, with correlated inputs).
+"""
+
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy import linalg, optimize
+
+__all__ = [
+    "LinearFit",
+    "Noise",
+    "NonlinearFit",
+    "fit_linear",
+    "fit_nonlinear",
+    "noise_of",
+    "polynomial_rows",
+    "smooth_noise",
+]
+
+Floats = NDArray[np.float64]
+STRONGEST = 0.95  # an autocorrelation above this is a drift, not noise
+
+
+@dataclass(frozen=True, slots=True)
+class Noise:
+    """Standard deviation, lag-1 correlation of neighbouring frames, and how well both are known."""
+
+    sigma: float
+    rho: float
+    dof: float  # effective
+
+    def covariance(self, steps: Floats) -> Floats:
+        """Covariance (n, n) of errors at places `steps` (n,), counted in frames."""
+        return self.sigma**2 * self.rho ** np.abs(steps[:, None] - steps[None, :])
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class LinearFit:
+    """Parameters of y = rows @ parameters with a covariance that holds for correlated errors."""
+
+    parameters: Floats  # (p,)
+    covariance: Floats  # (p, p)
+    residuals: Floats  # (n,)
+    noise: Noise
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class NonlinearFit:
+    """As `LinearFit`, for a model that is not linear in its parameters."""
+
+    parameters: Floats
+    covariance: Floats
+    residuals: Floats
+    noise: Noise
+    converged: bool
+
+
+def polynomial_rows(t: Floats, degree: int) -> tuple[Floats, float, float]:
+    """Legendre rows (n, degree + 1) over times scaled to -1..1, with the middle and the half-length of the window."""
+    middle, half = 0.5 * float(t[0] + t[-1]), 0.5 * float(t[-1] - t[0]) or 1.0
+    return np.asarray(np.polynomial.legendre.legvander((t - middle) / half, degree), dtype=float), middle, half
+
+
+def noise_of(residuals: Floats, steps: Floats, parameters: int) -> Noise:
+    """Noise behind the residuals of a fit.
+
+    Parameters
+    ----------
+    residuals : (n,) array
+    steps : (n,) array
+        Frame numbers, so that a gap counts as one.
+    parameters : int
+        How many the fit used up.
+
+    Returns
+    -------
+    Noise
+
+    Notes
+    -----
+    The lag-1 correlation of residuals of a fit is low by about (1 + 4 rho)/n for a mean (Kendall, Biometrika 41,
+    403 (1954)) and more for each further parameter; it is raised by (parameters + 3 rho)/n, cut to 0..0.95, so that
+    the noise is never taken for better than white.
+    """
+    n = residuals.size
+    spare = max(n - parameters, 1)
+    sigma = float(np.sqrt(residuals @ residuals / spare))
+    pairs = np.flatnonzero(np.diff(steps) <= 1.5)
+    if pairs.size < 4 or sigma == 0:
+        return Noise(sigma, 0.0, float(spare))
+    variance = float(residuals @ residuals) / n
+    raw = float(np.mean(residuals[pairs] * residuals[pairs + 1])) / variance
+    rho = float(np.clip(raw + (parameters + 3 * max(raw, 0.0)) / n, 0.0, STRONGEST))
+    # the variance of residuals is itself low where errors hang together: the fit follows them
+    effective = n * (1 - rho) / (1 + rho)
+    lost = min(parameters, 0.8 * effective) if rho > 0 else parameters
+    sigma = float(np.sqrt(variance * effective / max(effective - lost, 0.2 * effective))) if rho > 0 else sigma
+    return Noise(sigma, rho, float(max(effective - lost, 1.0)))
+
+
+def smooth_noise(t: Floats, y: Floats, steps: Floats, degree: int = 6) -> Noise:
+    """Noise of a series about a smooth curve, whatever its law: what a polynomial of fixed degree leaves."""
+    degree = int(min(degree, max(2, t.size // 4)))
+    rows, _, _ = polynomial_rows(t, degree)
+    parameters, *_ = linalg.lstsq(rows, y, lapack_driver="gelsy")
+    return noise_of(y - rows @ parameters, steps, degree + 1)
+
+
+def fit_linear(rows: Floats, y: Floats, steps: Floats, noise: Noise | None = None) -> LinearFit:
+    """Unweighted least squares by QR, with the covariance for correlated errors.
+
+    Parameters
+    ----------
+    rows : (n, p) array
+        Design matrix; its columns are scaled within.
+    y : (n,) array
+    steps : (n,) array
+        Frame numbers.
+    noise : Noise, optional
+        Where the model is not the law of the data, the noise found otherwise; else from the residuals.
+
+    Returns
+    -------
+    LinearFit
+
+    Raises
+    ------
+    ValueError
+        Fewer points than parameters.
+    """
+    n, p = rows.shape
+    if n < p:
+        raise ValueError(f"fit_linear: {n} points for {p} parameters.")
+    scale = np.sqrt((rows**2).sum(axis=0))
+    q, r, order = linalg.qr(rows / scale, mode="economic", pivoting=True)
+    inverse = np.zeros((p, n))
+    inverse[order] = linalg.solve_triangular(r, q.T)
+    inverse /= scale[:, None]
+    parameters = inverse @ y
+    residuals = y - rows @ parameters
+    residuals_again = inverse @ residuals  # one step of iterative refinement, for stiff problems
+    parameters = parameters + residuals_again
+    residuals = y - rows @ parameters
+    found = noise if noise is not None else noise_of(residuals, steps, p)
+    return LinearFit(parameters, inverse @ found.covariance(steps) @ inverse.T, residuals, found)
+
+
+def fit_nonlinear(
+    model: Callable[[Floats], Floats], start: Floats, y: Floats, steps: Floats, scales: Floats
+) -> NonlinearFit:
+    """Unweighted non-linear least squares (Levenberg-Marquardt of MINPACK), with the covariance for correlated errors.
+
+    Parameters
+    ----------
+    model : callable
+        (p,) parameters to (n,) values.
+    start : (p,) array
+    y : (n,) array
+    steps : (n,) array
+        Frame numbers.
+    scales : (p,) array
+        A typical change of each parameter.
+
+    Returns
+    -------
+    NonlinearFit
+    """
+
+    def miss(reduced: Floats) -> Floats:
+        value = model(start + reduced * scales) - y
+        clean: Floats = np.nan_to_num(np.asarray(value, dtype=float), nan=1e3, posinf=1e3, neginf=-1e3)
+        return clean
+
+    fit = optimize.least_squares(
+        miss, np.zeros(start.size), method="lm", xtol=1e-11, ftol=1e-11, gtol=1e-11, max_nfev=400
+    )
+    parameters = start + fit.x * scales
+    residuals = -fit.fun
+    noise = noise_of(residuals, steps, start.size)
+    inverse = np.linalg.pinv(fit.jac) * scales[:, None]
+    return NonlinearFit(parameters, inverse @ noise.covariance(steps) @ inverse.T, residuals, noise, bool(fit.success))

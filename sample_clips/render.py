@@ -6,7 +6,10 @@ and the transfer curve. Nothing here knows how the line moves: it asks a `Motion
 
     camera = Camera(...)
     renderer = Renderer(camera, scenery, motion, style, frame_s=camera.frame_times(200), seed=1)
-    write_clip(path, renderer.frames(), ticks, Fraction(1, 240), quarter_turns=camera.quarter_turns)
+    write_clip(path, renderer.frames(), ticks, Fraction(1, 240), quarter_turns=camera.quarter_turns, mirrored=camera.mirrored)
+
+Where to look: `camera.py` geometry, timing, sensor; `moving.py` what a motion must offer; `rolling.py` rows and their times;
+`pieces.py` lines cut up; `paint.py` round things in light; `encode.py` the file.
 """
 
 from collections.abc import Iterator, Sequence

@@ -5,6 +5,7 @@ from dataclasses import dataclass, replace
 import cv2
 import numpy as np
 import pytest
+from skimage.filters import unsharp_mask
 
 from sample_clips.camera import Camera, Flicker, Sensor, Shake, truth_pixels
 from sample_clips.moving import Ball, Bars, LineStyle
@@ -338,6 +339,16 @@ def test_noise_is_shot_and_read_noise():
     expected = np.sqrt(0.5 * 2000 + 10**2) / 2000 * 1023
     assert picture.astype(float).std() == pytest.approx(expected, rel=0.01)
     assert picture.mean() == pytest.approx(0.5 * 1023, abs=0.5)
+
+
+def test_sharpening_is_unsharp_masking_as_scikit_image_has_it():
+    ball = Thrown((0, 0, 0), radius=0.02)
+    plain, sharp = (
+        Renderer(replace(CAMERA, sensor=Sensor(np.inf, sharpen=amount)), EMPTY, ball, frame_s=[0.0]).frame(0, bits=10) / 1023
+        for amount in (0.0, 0.8)
+    )
+    assert sharp.max() > plain.max() + 0.02  # the halo is there
+    np.testing.assert_allclose(sharp, unsharp_mask(plain, radius=1.2, amount=0.8), atol=0.003)
 
 
 def test_a_frame_is_the_same_whatever_was_rendered_before_it():

@@ -162,6 +162,18 @@ class Background:
         h, w = gray.shape
         return gray[y0:y1, x0:x1] - self.expected((h, w), (x0, y0, x1, y1), motion, light)
 
+    def doubt(self, motion: _Motion | None = None) -> NDArray[np.float32]:
+        """What compression, and a camera movement known to a few tenths of a pixel, leave at the scene's own edges.
+
+        Returns
+        -------
+        (h, w) float32 array
+            Grey levels, in the reference frame's place, three pixels wide about each edge.
+        """
+        steep = cv2.morphologyEx(self.gray, cv2.MORPH_GRADIENT, np.ones((3, 3), np.uint8))
+        wide = cv2.dilate(steep, np.ones((3, 3), np.uint8)) if motion is not None else steep
+        return np.asarray((0.3 if motion is not None else 0.12) * wide, dtype=np.float32)
+
     def sigma(self, level: Any) -> NDArray[np.float32]:
         """Noise of pixels of the given brightness [grey levels]."""
         return self.noise_by_level[np.clip(np.asarray(level), 0, 255).astype(np.intp)]

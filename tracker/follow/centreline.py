@@ -24,6 +24,8 @@ _STATION_PX = 2.0  # sections are this far apart along the line
 _FLANK_PX = 4.0  # scene looked at on either side of the line
 _LEAST_BAND_PX = 8.0
 _SMOOTH_PX = 9.0  # half length of the local cubic that keeps the curve from roughening frame by frame
+_CALM_PX = 25  # half length over which the movement carried into the next frame is smoothed: roughness would feed itself
+_MOST_TURNING = 4 * np.pi  # of a line in all; a half turn over the arc, and as much again to and fro on its legs
 _BORDER_PX = 1.5
 _GAP_PX = 60.0  # a longer stretch without evidence ends the line
 
@@ -97,7 +99,9 @@ class LineFollower:
         """The line in the next frame, or None where it is not found."""
         light = self.background.light(gray, motion)
         if self._curve is not None:
-            line = self._step(gray, motion, light, self._moved_on(), _LEAST_BAND_PX)
+            curve = self._moved_on()
+            curve = curve if motion is None else np.asarray(motion.apply(curve))
+            line = self._step(gray, motion, light, curve, _LEAST_BAND_PX)
             if line is not None:
                 return line
             self._curve = None
@@ -110,7 +114,11 @@ class LineFollower:
 
     def _search(self, index: int, gray: NDArray[np.uint8], motion: Any, light: Light) -> Centreline | None:
         difference = self.background.difference(gray, motion, light=light)
-        path = find_path(difference, self.background.noise, self.origin_px, self.up)
+        origin = np.asarray(self.origin_px) if motion is None else np.asarray(motion.apply(self.origin_px))
+        path = find_path(
+            difference, self.background.noise, (float(origin[0]), float(origin[1])), self.up,
+            doubt=self.background.doubt(motion),
+        )  # fmt: skip
         line = None
         if path is not None:
             line = self._refine(gray, motion, light, path)
@@ -132,7 +140,7 @@ class LineFollower:
             line = self._step(gray, motion, light, curve, _LEAST_BAND_PX, first=True)
             if line is None or self._curve is None:
                 return None
-            curve = self._curve
+            curve = self._curve if motion is None else np.asarray(motion.apply(self._curve))
         return line
 
     def _set_template(self, profile: NDArray[np.float64] | None) -> None:
@@ -273,8 +281,10 @@ class LineFollower:
         move = np.zeros(points.shape[0])
         if not first:
             move = _smooth_values(self._predicted_move(index, curve.shape[0]) + shift, 6)
-        even, values = _even_with(points, move)
-        self._curve, self._move = even, values
+        if _turning(points) > _MOST_TURNING:
+            return None  # it has begun to zigzag: look again from nothing
+        place = points if motion is None else np.asarray(motion.undo(points))  # kept as if the camera had stood still
+        self._curve, self._move = _even_with(place, _smooth_values(move, _CALM_PX))
         exits = bool(
             (points[-1, 0] < 4) | (points[-1, 0] > shape[1] - 5) | (points[-1, 1] < 4) | (points[-1, 1] > shape[0] - 5)
         )
@@ -445,6 +455,13 @@ def _smooth(points: NDArray[np.float64], half_px: float) -> NDArray[np.float64]:
 def _smooth_values(values: NDArray[np.float64], half: int) -> NDArray[np.float64]:
     size = min(2 * half + 1, 2 * ((values.size - 1) // 2) + 1)
     return np.asarray(savgol_filter(values, size, 1, mode="interp")) if size >= 5 else values
+
+
+def _turning(points: NDArray[np.float64]) -> float:
+    """Sum of all turns along a curve [rad], of either sense, over steps that noise does not turn."""
+    chord = np.diff(points[::10], axis=0)
+    angle = np.unwrap(np.arctan2(chord[:, 1], chord[:, 0]))
+    return float(np.abs(np.diff(angle)).sum())
 
 
 def _even(points: NDArray[np.float64]) -> NDArray[np.float64]:

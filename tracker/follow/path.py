@@ -18,6 +18,7 @@ __all__ = ["Path", "find_path"]
 
 _FINE, _BROAD = 1.2, 41  # px: sigma that joins beads into a line, box that takes the broad shadow out
 _MOST_PIECES = 60
+_MOST_BRANCHES = 0.35  # share of the pixels found that may lie off the line, in its shadow or at an edge of the scene
 _LINK_COST = 3.0  # a pixel of gap costs as much as three of line
 
 
@@ -30,7 +31,7 @@ class Path:
     points_px : (n, 2) float64 array
         Column and row of its ridge, one to one and a half pixels apart, from the start to the exit.
     width_px : float
-        Mean width of the pixels that stand out.
+        Typical width of the pixels that stand out.
     contrast : float
         Ridge height typical of the line, in grey levels.
     """
@@ -46,6 +47,7 @@ def find_path(
     origin_px: tuple[float, float],
     up: tuple[float, float] = (0.0, -1.0),
     gap_px: float = 45.0,
+    doubt: NDArray[np.float32] | None = None,
 ) -> Path | None:
     """Find the line in a difference picture.
 
@@ -61,13 +63,18 @@ def find_path(
         Unit vector against gravity in the picture.
     gap_px : float
         Pieces nearer than this are joined.
+    doubt : (h, w) float32 array, optional
+        Size of difference that the still scene alone may leave there, at its edges [grey levels].
 
     Returns
     -------
     Path or None
         None where nothing thin, long and begun near the rim stands out: nothing is invented.
     """
-    ridge = _ridge(difference)
+    size = np.abs(difference)
+    if doubt is not None:
+        size = np.maximum(size - doubt, 0.0)
+    ridge = _ridge(size)
     found = _pieces(ridge, noise)
     if found is None:
         return None
@@ -81,7 +88,10 @@ def find_path(
         path = _longest(graph, members, points, ridge[rows, columns], contrast, np.asarray(origin_px, float))
         path = _cut_below_rim(path, points, np.asarray(origin_px, float), np.asarray(up, float))
         length = float(np.hypot(*np.diff(points[path], axis=0).T).sum()) if path.size > 1 else 0.0
-        width = members.size / max(length, 1.0)
+        aside, _ = cKDTree(points[path]).query(points[members])
+        width = 4.0 * float(np.median(aside)) + 1.0  # of evenly spread distances up to half the width
+        if (aside > max(1.5 * width, 5.0)).mean() > _MOST_BRANCHES:
+            continue
         if not _plausible(points[path], length, width, np.asarray(origin_px, float), difference.shape):
             continue
         if best is None or path.size > best.points_px.shape[0]:
@@ -89,8 +99,7 @@ def find_path(
     return best
 
 
-def _ridge(difference: NDArray[np.float32]) -> NDArray[np.float32]:
-    size = np.abs(difference)
+def _ridge(size: NDArray[np.float32]) -> NDArray[np.float32]:
     fine = cv2.GaussianBlur(size, (0, 0), _FINE)
     return np.asarray(fine - cv2.blur(size, (_BROAD, _BROAD)), dtype=np.float32)
 

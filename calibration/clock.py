@@ -261,7 +261,7 @@ class _Steps:
         ratio = step / usual
         periods = np.maximum(1, np.rint(ratio)).astype(np.int64)
         near = ratio[ratio < GAP]
-        scatter = 1.4826 * float(np.median(np.abs(near - np.median(near)))) if near.size else 0.0
+        scatter = float(near.std()) if near.size else 0.0
         whole = (np.abs(ratio - periods) <= np.maximum(min(0.25, 0.02 + 4 * scatter), 1.51 / usual)) | (ratio < GAP)
         period, u_period, grid, jitter = float(usual.min()), 0.0, None, 0.0
         if not ramped:

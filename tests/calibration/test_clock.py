@@ -10,7 +10,7 @@ from typing import Any
 import av
 import numpy as np
 import pytest
-from hypothesis import given, settings
+from hypothesis import example, given, settings
 from hypothesis import strategies as st
 
 from calibration.clock import Clock, hidden_steps, make_clock, scan_direction
@@ -307,6 +307,7 @@ def test_stamps_that_are_no_time_are_refused() -> None:
     jitter=st.sampled_from([0.0, 0.03, 0.08]),
     seed=st.integers(0, 2**32 - 1),
 )
+@example(fps=907.75, base=Fraction(1, 15360), start=0, lost={12: 3}, jitter=0.03, seed=21)  # was called a gap of no whole number
 def test_laws_of_every_clock(fps: float, base: Fraction, start: int, lost: dict[int, int], jitter: float, seed: int) -> None:
     """Zero at the first frame, rising, true within a tick whatever is lost, shifted or jittered; losses counted."""
     periods = np.ones(120, dtype=int)

@@ -27,6 +27,7 @@ _SMOOTH_PX = 9.0  # half length of the local cubic that keeps the curve from rou
 _CALM_PX = 25  # half length over which the movement carried into the next frame is smoothed: roughness would feed itself
 _MOST_TURNING = 4 * np.pi  # of a line in all; a half turn over the arc, and as much again to and fro on its legs
 _BORDER_PX = 1.5
+_START_REACH = 0.12  # of the picture's height: the line's first seen point may be so far above the rim
 _GAP_PX = 60.0  # a longer stretch without evidence ends the line
 
 
@@ -264,6 +265,8 @@ class LineFollower:
         first_kept, last_kept = np.nonzero(keep)[0][[0, -1]]
         take = slice(int(first_kept), int(last_kept) + 1)
         points, index, shift = points[take], index[take], shift[take]
+        if not self._begins_at_rim(points[0], shape, motion):
+            return None
         section = np.clip(np.searchsorted(at, index), 0, at.size - 1)
         seen_here = seen[section]
         if seen_here.mean() < 0.5:
@@ -313,6 +316,12 @@ class LineFollower:
         if below.size:
             inside[: below[-1]] = False
         return np.asarray(inside)
+
+    def _begins_at_rim(self, point: NDArray[np.float64], shape: tuple[int, int], motion: Any) -> bool:
+        """Neither below the rim's level nor far above it, where only a part of the line would be followed."""
+        place = point if motion is None else np.asarray(motion.undo(point))
+        height = float((place - np.asarray(self.origin_px)) @ np.asarray(self.up))
+        return -10.0 <= height <= _START_REACH * shape[0]
 
     def _pool(
         self, mean: NDArray[np.float32], at: NDArray[np.intp], q: NDArray[np.float64], normal: NDArray[np.float64], half: int

@@ -30,6 +30,7 @@ Floats = NDArray[np.float64]
 _THIN = 3  # every third point of the axis is kept
 _NODE_PX = 12  # the plane is evaluated this often along the line
 _BLURRED = 0.8  # of a pitch travelled during the exposure: the texture is as good as gone
+_GLIMPSE_FRAMES = 6
 _NAN2 = np.full(2, np.nan)
 
 
@@ -271,6 +272,7 @@ class _Reader:
 
     def result(self) -> PayoutFollow:
         kept = self.kept
+        _drop_glimpses(kept)
         first = kept[0].frame if kept else 0
         frame_s = self.clock.frame_s[first : first + len(kept)] if kept else np.zeros(1)
         at_s = np.array([self._time(k) for k in kept])
@@ -394,6 +396,25 @@ def _metres(plane: _Plane, points: Floats) -> Floats:
     off = at - design @ affine
     index = np.arange(n)
     return points @ affine[:2] + affine[2] + np.column_stack([np.interp(index, nodes, off[:, 0]), np.interp(index, nodes, off[:, 1])])
+
+
+def _drop_glimpses(kept: list[_Kept]) -> None:
+    """What is found in a few frames only is somebody walking by, or a reflection: a line stays."""
+    for what in ("line", "arc"):
+        has = [len(k.line_px) > 0 if what == "line" else k.arc is not None for k in kept]
+        start = 0
+        for i in range(len(kept) + 1):
+            if i < len(kept) and has[i] == has[start]:
+                continue
+            if has[start] and i - start < min(_GLIMPSE_FRAMES, len(kept)):
+                for k in kept[start:i]:
+                    k.arc = None
+                    if what == "line":
+                        k.line_px, k.u_line_px, k.sights = np.zeros((0, 2), np.float32), np.zeros(0, np.float32), []
+                        k.flags = ["line-lost"]
+                    else:
+                        k.flags.append("no-arc")
+            start = i
 
 
 def _scatter_of_apexes(kept: list[_Kept], at_s: Floats) -> None:

@@ -14,6 +14,7 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.linalg import solveh_banded
 from scipy.signal import savgol_filter
 from scipy.spatial import cKDTree
 
@@ -24,8 +25,9 @@ __all__ = ["Along", "along_line", "carried_jump", "jitter"]
 Floats = NDArray[np.float64]
 
 _RIM_POINTS = 20  # behind those that the container touches, for the line's run through the rim's level
+_CALM_POINTS = 31
+_MOST_CARRIED = 15.0  # px that the line is carried on to the rim's level
 _EVERY = 12  # points of the curve compared with the last frame's
-_DRIFT_FRAMES = 31  # window of a local parabola: slower changes are left to the rim itself, as carried errors add up
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -40,6 +42,8 @@ class Along:
         Length from the rim when each point was seen [m].
     t_s : (n,) array
         When it was seen.
+    doubt_m : float
+        How far another way to carry the line to the rim's level disagrees [m].
     stretch : (n,) array
         Rate at which the length from the rim to there changes by the curve's movement alone [m/s].
     """
@@ -48,6 +52,7 @@ class Along:
     sigma_m: Floats
     t_s: Floats
     stretch: Floats
+    doubt_m: float
 
 
 def along_line(
@@ -72,7 +77,8 @@ def along_line(
     """
     plain = arc_length(metres)
     origin, z_slope = _rim(metres, plain, touched)
-    velocity = move_m / period_s
+    straight = plain[0] - metres[0, 1] / z_slope  # from the first point seen, at the slope of the fit
+    velocity = _calm(move_m) / period_s
     moved = velocity[:, None] * normal
     tangent = np.gradient(metres, axis=0)
     tangent /= np.maximum(np.hypot(tangent[:, 0], tangent[:, 1]), 1e-12)[:, None]
@@ -81,14 +87,21 @@ def along_line(
     t_rim = t_s[0]
     grown = at_rim + np.concatenate([[0.0], np.cumsum(rate)])
     timed = at_rim * t_rim + np.concatenate([[0.0], np.cumsum(rate * 0.5 * (t_s[1:] + t_s[:-1]))])
-    return Along(metres, plain - origin + grown * t_s - timed, t_s, grown)
+    return Along(metres, plain - origin + grown * t_s - timed, t_s, grown, float(straight - origin))
+
+
+def _calm(values: Floats) -> Floats:
+    """Smoothed along the line: the noise of a point is in its movement and in the curvature there too, and the
+    integral of their product would not vanish."""
+    size = min(_CALM_POINTS, 2 * ((values.size - 1) // 2) + 1)
+    return np.asarray(savgol_filter(values, size, 1, mode="interp")) if size >= 5 else values
 
 
 def _rim(metres: Floats, plain: Floats, touched: int) -> tuple[float, float]:
     """Where along the points the rim's level is passed, and the slope dz/ds there.
 
-    Close to the container's edge the line's place is drawn aside, so a parabola through the points just
-    behind is followed down to the level; it may not bend more than the line does there.
+    Close to the container's edge the line's place is drawn aside, so the points just behind, on a small arc those
+    over its top too, are followed down to the level by a parabola or a cubic.
     """
     z = metres[:, 1]
     above = np.nonzero(z >= 0)[0]
@@ -100,15 +113,20 @@ def _rim(metres: Floats, plain: Floats, touched: int) -> tuple[float, float]:
         return float(plain[i - 1] + share * (plain[i] - plain[i - 1])), float(np.clip(slope, 0.3, 1.0))
     top = int(np.argmax(z))
     first = min(touched, top // 3)  # of a small arc there is no more to spare
-    last = min(first + int(np.clip(0.6 * (top - first), 5, _RIM_POINTS)), z.size)
-    s0 = plain[first]
-    degree = 2 if last - first >= 12 else 1
-    c2, c1, c0 = np.append(np.zeros(2 - degree), np.polyfit(plain[first:last] - s0, z[first:last], degree))
-    c1 = float(np.clip(c1, 0.3, 1.0))
-    c2 = float(np.clip(c2, -c1 / max(plain[last - 1] - s0, 1e-9), 0.0))
-    root = c1 * c1 - 4 * c2 * c0
-    s = -2 * c0 / (c1 + np.sqrt(root)) if root > 0 else -c0 / c1
-    return float(s0 + s), float(np.clip(c1 + 2 * c2 * s, 0.3, 1.0))
+    last = min(first + int(np.clip(2 * (top - first), 14, _RIM_POINTS)), z.size)
+    degree = 3 if last > top else 2
+    pixel = (plain[last - 1] - plain[first]) / max(last - 1 - first, 1)
+    u = (plain[first:last] - plain[first]) / pixel
+    c = np.polynomial.polynomial.polyfit(u, z[first:last], min(degree, last - first - 1))
+    down = np.arange(0.0, -_MOST_CARRIED, -0.25)
+    height = np.polynomial.polynomial.polyval(down, c)
+    under = np.nonzero(height <= 0)[0]
+    if under.size and under[0] > 0:
+        i = int(under[0])
+        slope = float((height[i - 1] - height[i]) / (0.25 * pixel))
+        return float(plain[first] + pixel * (down[i] + 0.25 * height[i] / (height[i] - height[i - 1]))), float(np.clip(slope, 0.3, 1.0))
+    slope = float(np.clip((z[min(first + 5, z.size - 1)] - z[first]) / (5 * pixel), 0.3, 1.0))
+    return float(plain[first] - z[first] / slope), slope
 
 
 def carried_jump(last: Along, now: Along, move_m: Floats, normal: Floats) -> float:
@@ -132,16 +150,31 @@ def carried_jump(last: Along, now: Along, move_m: Floats, normal: Floats) -> flo
     return float(np.median(now.sigma_m[pick][good] - carried[good]))
 
 
-def jitter(jumps: Floats) -> Floats:
-    """Error of the rim's crossing in each frame [m], from the jumps: their sum without its slow part.
+def jitter(jumps_m: Floats, u_jumps_m: Floats, u_rim_m: float) -> Floats:
+    """Error of the rim's crossing in each frame [m], from both ways to know it.
 
     Parameters
     ----------
-    jumps : (n,) array
-        Of each frame against the one before; NaN where unknown (taken as none).
+    jumps_m, u_jumps_m : (n,) arrays
+        Of each frame's coordinate against the last one's carried on, and their standard uncertainty; NaN where unknown.
+    u_rim_m : float
+        Standard uncertainty of the rim's crossing as seen in one frame.
+
+    Notes
+    -----
+    Least squares over the clip: the errors e are small, (e / u_rim)^2, and follow the jumps,
+    ((e_k - e_k-1 - jump_k) / u_k)^2. While the line's shape rests that is nearly the jumps' sum, while it moves fast
+    nearly nothing.
     """
-    total = np.cumsum(np.nan_to_num(jumps))
-    size = min(_DRIFT_FRAMES, 2 * ((total.size - 1) // 2) + 1)
-    if size < 5:
-        return np.zeros_like(total)
-    return np.asarray(total - savgol_filter(total, size, 2, mode="interp"))
+    n = jumps_m.size
+    if n < 3:
+        return np.zeros(n)
+    known = np.isfinite(jumps_m[1:]) & np.isfinite(u_jumps_m[1:])
+    weight = np.where(known, 1.0 / np.where(known, u_jumps_m[1:], 1.0) ** 2, 0.0)
+    pull = weight * np.where(known, jumps_m[1:], 0.0)
+    diagonal = np.full(n, 1.0 / u_rim_m**2)
+    diagonal[1:] += weight
+    diagonal[:-1] += weight
+    upper = np.concatenate([[0.0], -weight])
+    right = np.concatenate([[0.0], pull]) - np.concatenate([pull, [0.0]])
+    return np.asarray(solveh_banded(np.stack([upper, diagonal]), right))

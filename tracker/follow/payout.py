@@ -11,6 +11,8 @@ from typing import Any, Protocol
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
+from scipy.ndimage import uniform_filter1d
+from scipy.signal import savgol_filter
 
 from calibration.clock import Clock
 from calibration.notice import Notice
@@ -31,6 +33,9 @@ _THIN = 3  # every third point of the axis is kept
 _NODE_PX = 12  # the plane is evaluated this often along the line
 _BLURRED = 0.8  # of a pitch travelled during the exposure: the texture is as good as gone
 _GLIMPSE_FRAMES = 6
+_DOUBT_FRAMES = 15
+_U_RIM_PX = 0.8  # of the rim's crossing along the line in one frame: half a pixel of height where the line is flat
+_U_CARRIED_PX, _U_MOVED = 0.05, 0.4  # of the coordinate carried to the next frame, and per pixel that the line moved
 _NAN2 = np.full(2, np.nan)
 
 
@@ -129,7 +134,8 @@ class _Kept:
     line_px: NDArray[np.float32] = field(default_factory=lambda: np.zeros((0, 2), np.float32))
     u_line_px: NDArray[np.float32] = field(default_factory=lambda: np.zeros(0, np.float32))
     jump_m: float = np.nan
-    rest_px: float = np.nan
+    doubt_m: float = np.nan
+    moved_px: float = np.nan
     lighter: float = np.nan
 
 
@@ -205,7 +211,7 @@ class _Reader:
         keep = points[::_THIN].astype(np.float32)
         keep[~line.seen[::_THIN]] = np.nan
         kept.line_px, kept.u_line_px = keep, line.u_px[::_THIN].astype(np.float32)
-        kept.rest_px = float(np.median(np.abs(line.move_px)))
+        kept.moved_px = float(np.sqrt(np.mean(line.move_px**2)))
         kept.lighter = float(np.mean(line.brightness > 0))
 
     def _arc(
@@ -237,6 +243,7 @@ class _Reader:
         touched = round(0.5 * (self.follower.width_px + self.average_px)) + 1
         here = along_line(metres, move, normal, t, period, touched)
         sigma = here.sigma_m
+        kept.doubt_m = here.doubt_m
         if self.last_along is not None and self.last_along[0] == index - 1:
             kept.jump_m = carried_jump(self.last_along[1], here, move, normal)
         self.last_along = (index, here)
@@ -296,26 +303,33 @@ class _Reader:
         if len(self.kept) < 3:
             return []
         first = self.kept[0].frame
-        late = jitter(np.array([k.jump_m for k in self.kept]))
+        late = self._jitter()
         sights = [
             [replace(s, frame=s.frame - first, sigma_m=s.sigma_m - off) for s in k.sights]
             for k, off in zip(self.kept, late, strict=True)
         ]
         return follow_marks(sights, frame_s, self.hints.mark_spacing_m)
 
+    def _jitter(self) -> Floats:
+        jumps = np.array([k.jump_m for k in self.kept])
+        u = np.hypot(_U_CARRIED_PX, _U_MOVED * np.array([k.moved_px for k in self.kept])) / self.px_per_m
+        return jitter(jumps, u, _U_RIM_PX / self.px_per_m)
+
     def _speed(self, tracks: list[MarkTrack], frame_s: Floats, at_s: Floats) -> SpeedSeries:
         texture = None
         if self.steps and self.hints.pitch_m is not None:
             step, u, a, b, number = (np.array(x) for x in zip(*self.steps, strict=True))
-            late = jitter(np.array([k.jump_m for k in self.kept]))
+            late = self._jitter()
             k = number.astype(np.intp)
             step = step - (late[k] - late[k - 1])
             texture = TextureSteps(step, u, a, b, self.hints.pitch_m)
-        rest = [k.rest_px for k in self.kept[1:6]]
+        rest = [k.moved_px for k in self.kept[1:6]]
         at_rest = len(rest) > 0 and bool(np.all(np.array(rest) < 0.1))
-        return speed_series(
+        speed = speed_series(
             tracks, texture, frame_s, at_s, spacing_m=self.hints.mark_spacing_m, at_rest_first=at_rest
         )
+        doubt = _pace_of(np.array([k.doubt_m for k in self.kept]), frame_s)
+        return replace(speed, u_v_mps=np.hypot(speed.u_v_mps, doubt))
 
     def _frame(
         self, kept: _Kept, t: float, light: SideLight, marks: dict[int, list[Floats]], speed: SpeedSeries, i: int
@@ -396,6 +410,19 @@ def _metres(plane: _Plane, points: Floats) -> Floats:
     off = at - design @ affine
     index = np.arange(n)
     return points @ affine[:2] + affine[2] + np.column_stack([np.interp(index, nodes, off[:, 0]), np.interp(index, nodes, off[:, 1])])
+
+
+def _pace_of(doubt_m: Floats, frame_s: Floats) -> Floats:
+    """Speed that the drift of the doubt about the rim's crossing would feign [m/s], its root mean square nearby.
+
+    Both ways to carry the line to the rim's level are fair, and half of what they differ is taken for the error of one.
+    """
+    known = np.isfinite(doubt_m)
+    if known.sum() < _DOUBT_FRAMES + 2:
+        return np.zeros(doubt_m.size)
+    whole = np.interp(frame_s, frame_s[known], doubt_m[known])
+    pace = savgol_filter(whole, _DOUBT_FRAMES, 1, deriv=1, mode="interp") / float(np.median(np.diff(frame_s)))
+    return np.asarray(0.5 * np.sqrt(uniform_filter1d(pace**2, _DOUBT_FRAMES, mode="nearest")))
 
 
 def _drop_glimpses(kept: list[_Kept]) -> None:

@@ -35,7 +35,7 @@ _REACH_FRAMES = 6  # a frame farther than this from any observation has no speed
 _U_PLACEMENT = 0.005  # relative, of one mark's place on the line where nothing else is said
 _MOST_ACCELERATION = 100.0  # m/s^2
 _POWERS = np.arange(-2.0, 5.01, 0.5)
-_BLOCK_FRAMES = 5
+_BLOCK_FRAMES, _FOLDS = 5, 4
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -275,7 +275,7 @@ class _Fit:
         for turn in range(4):  # reweighted: a sight that belongs to another mark or to a glint must not pull
             if turn in (0, 2):
                 power = self._power(x, y, weight, penalty, held_x, held_y, held_u, group)
-            answer, normal = self._solved(x, y, weight, 10.0**power * penalty, held_x, held_y, held_u)
+            answer, normal = self._solved(*self._gram(x, y, weight), 10.0**power * penalty, held_x, held_y, held_u)
             left = (y - x @ answer) / u
             scale = max(1.4826 * float(np.median(np.abs(left))), 1e-3)
             weight = np.minimum(1.0, 2.5 * scale / np.maximum(np.abs(left), 1e-12)) / u**2
@@ -348,30 +348,46 @@ class _Fit:
         self, x: Floats, y: Floats, weight: Floats, penalty: Floats,
         held_x: Floats, held_y: Floats, held_u: Floats, group: NDArray[np.intp],
     ) -> float:  # fmt: skip
-        """Weight of the penalty (as a power of ten) that best foretells stretches of frames that were left out."""
-        folds = 4
-        scores = np.zeros(_POWERS.size)
-        for fold in range(folds):
-            out = group % folds == fold
+        """Weight of the penalty (as a power of ten) that foretells stretches of frames that were left out.
+
+        The heaviest is taken that does no worse than the best by more than one standard error of the difference
+        between the stretches: the score is flat on the side of too little smoothing (the usual rule for choosing a
+        model by cross-validation, Hastie, Tibshirani, Friedman, The Elements of Statistical Learning, 7.10).
+        """
+        scores = np.zeros((_POWERS.size, int(group.max()) + 1))
+        fold = group % _FOLDS
+        grams = [self._gram(x[fold == k], y[fold == k], weight[fold == k]) for k in range(_FOLDS)]
+        whole = (sum(g[0] for g in grams), sum(g[1] for g in grams))
+        for k in range(_FOLDS):
+            out = fold == k
             if not out.any() or out.all():
                 continue
             count = np.maximum(np.bincount(group[out], weight[out]), 1e-300)
+            rest = (whole[0] - grams[k][0], whole[1] - grams[k][1])
             for i, power in enumerate(_POWERS):
-                answer, _ = self._solved(x[~out], y[~out], weight[~out], 10.0**power * penalty, held_x, held_y, held_u)
+                answer, _ = self._solved(*rest, 10.0**power * penalty, held_x, held_y, held_u)
                 left = weight[out] * (y[out] - x[out] @ answer)
-                scores[i] += float((np.bincount(group[out], left) ** 2 / count).sum())
-        return float(_POWERS[int(np.argmin(scores))])
+                scores[i, : count.size] += np.bincount(group[out], left) ** 2 / count
+        best = int(np.argmin(scores.sum(axis=1)))
+        worse = scores - scores[best]
+        error = worse.std(axis=1) * np.sqrt(worse.shape[1])
+        return float(_POWERS[np.nonzero(worse.sum(axis=1) <= error)[0].max(initial=best)])
+
+    @staticmethod
+    def _gram(x: Floats, y: Floats, weight: Floats) -> tuple[Floats, Floats]:
+        xw = x * weight[:, None]
+        return x.T @ xw, xw.T @ y
 
     def _solved(
-        self, x: Floats, y: Floats, weight: Floats, penalty: Floats, held_x: Floats, held_y: Floats, held_u: Floats
+        self, gram: Floats, right: Floats, penalty: Floats, held_x: Floats, held_y: Floats, held_u: Floats
     ) -> tuple[Floats, tuple[Floats, bool]]:
-        xw = x * weight[:, None]
-        a = x.T @ xw
         held_w = held_x / held_u[:, None] ** 2
-        base = float(np.trace(a[: self.size, : self.size])) / self.size
-        tiny = 1e-9 * np.eye(x.shape[1]) * max(float(np.trace(a)) / x.shape[1], 1.0)
-        normal = cho_factor(a + held_x.T @ held_w + tiny + base * penalty)
-        return cho_solve(normal, xw.T @ y + held_w.T @ held_y), normal
+        base = float(np.trace(gram[: self.size, : self.size])) / self.size
+        tiny = 1e-9 * max(float(np.trace(gram)) / gram.shape[0], 1.0)
+        normal = gram + held_x.T @ held_w + base * penalty
+        normal[np.diag_indices_from(normal)] += tiny
+        factor = cho_factor(normal, check_finite=False)
+        return cho_solve(factor, right + held_w.T @ held_y, check_finite=False), factor
 
     def common_error(self) -> float:
         """What all sights of a frame are off together [m]: the rim's crossing, which the texture shares with the marks."""

@@ -191,6 +191,17 @@ def test_stills_are_the_telling_frames(made: Demo) -> None:
     assert one.picture.shape[2] == 3
 
 
+def test_the_same_frames_give_the_same_bytes(tmp_path: Path) -> None:
+    """Ten times, with other things in memory: it once failed only now and then."""
+    small, path, seen = demo("payout", frames=24, size=(90, 160)), tmp_path / "overlay.mp4", set()
+    for i in range(10):
+        clutter = [np.full(size, i, np.uint8) for size in (10_000 * (i + 1), 333_333, 1_000_001)]
+        del clutter
+        write_overlay(small.result, small.frames(), path)
+        seen.add(path.read_bytes())
+    assert len(seen) == 1
+
+
 def test_no_frames_is_said(made: Demo, tmp_path: Path) -> None:
     with pytest.raises(ValueError, match="no frames"):
         write_overlay(made.result, iter(()), tmp_path / "overlay.mp4")

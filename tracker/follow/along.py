@@ -15,6 +15,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 from scipy.linalg import solveh_banded
+from scipy.ndimage import uniform_filter1d
 from scipy.signal import savgol_filter
 from scipy.spatial import cKDTree
 
@@ -26,6 +27,7 @@ Floats = NDArray[np.float64]
 
 _RIM_POINTS = 20  # behind those that the container touches, for the line's run through the rim's level
 _CALM_POINTS = 31
+_STEADY_FRAMES = 25
 _MOST_CARRIED = 15.0  # px that the line is carried on to the rim's level
 _EVERY = 12  # points of the curve compared with the last frame's
 
@@ -170,8 +172,12 @@ def jitter(jumps_m: Floats, u_jumps_m: Floats, u_rim_m: float) -> Floats:
     if n < 3:
         return np.zeros(n)
     known = np.isfinite(jumps_m[1:]) & np.isfinite(u_jumps_m[1:])
-    weight = np.where(known, 1.0 / np.where(known, u_jumps_m[1:], 1.0) ** 2, 0.0)
-    pull = weight * np.where(known, jumps_m[1:], 0.0)
+    u = np.where(known, u_jumps_m[1:], 1.0)
+    jump = np.where(known, jumps_m[1:], 0.0)
+    steady = uniform_filter1d(jump, _STEADY_FRAMES, mode="nearest")  # of a moving shape an error of what is carried
+    jump = jump - steady * u**2 / (u**2 + (0.4 * u_rim_m) ** 2)
+    weight = np.where(known, 1.0 / u**2, 0.0)
+    pull = weight * jump
     diagonal = np.full(n, 1.0 / u_rim_m**2)
     diagonal[1:] += weight
     diagonal[:-1] += weight

@@ -35,7 +35,7 @@ _REACH_FRAMES = 6  # a frame farther than this from any observation has no speed
 _U_PLACEMENT = 0.005  # relative, of one mark's place on the line where nothing else is said
 _MOST_ACCELERATION = 100.0  # m/s^2
 _POWERS = np.arange(-2.0, 5.01, 0.5)
-_BLOCK_FRAMES, _FOLDS = 5, 4
+_BLOCK_FRAMES, _FOLDS = 12, 4
 
 
 @dataclass(frozen=True, slots=True, eq=False)

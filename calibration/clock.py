@@ -37,7 +37,8 @@ OFF_GRID = 0.75  # ticks; rounding moves a stamp by half a tick, the rest is let
 COARSE = 4.0  # ticks a step; below, a gap of several steps fits two counts
 MANY_GAPS = 12  # that are worth counting again
 GAP = 1.5  # a step this many usual steps long is a gap
-IMPOSSIBLE_READOUT = 1.02  # of a frame period
+LONG_READOUT = 1.02  # of a frame period: a sensor rarely reads one picture while it takes the next
+IMPOSSIBLE_READOUT = 3.0  # of a frame period: a wrong unit or a wrong rate
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -217,6 +218,16 @@ def make_clock(
             f"clock.readout_s is {readout_s:g}, longer than the frame period of {period:.5f} s at {rate.fps:.5g} frames a second.",
             "Give the time from the first to the last row of one picture, or leave it out.",
         )
+    long_readout: tuple[Notice, ...] = ()
+    if readout_s is not None and abs(readout_s) > LONG_READOUT * period:
+        long_readout = (
+            Notice(
+                "readout-long",
+                f"clock.readout_s is {readout_s:g}, longer than the frame period of {period:.5f} s.",
+                f"If the true readout is one period, times across the picture are {abs(readout_s) - period:.4f} s out.",
+                "Check readout_s and capture_fps; most cameras read a picture within one frame period.",
+            ),
+        )
     return Clock(
         frame_s=frame_s,
         readout_s=0.0 if readout_s is None else float(readout_s),
@@ -227,7 +238,7 @@ def make_clock(
         u_stamp_s=u_stamp_s,
         capture_fps=rate.fps,
         provenance=rate.provenance,
-        notices=(*rate.notices, *steps.notices(frame_s, name)),
+        notices=(*rate.notices, *long_readout, *steps.notices(frame_s, name)),
     )
 
 
@@ -734,7 +745,7 @@ def hidden_steps(difference: ArrayLike, track: ArrayLike | None = None) -> Hidde
         place = np.asarray(track, dtype=float)
         if place.shape != (len(change) + 1, 2):
             raise ValueError(f"track: expected ({len(change) + 1}, 2) places, got {place.shape}.")
-        jumps, missing = _leaps(place, repeated)
+        jumps, missing = _leaps(place)
     return HiddenSteps(repeated, jumps, missing)
 
 
@@ -750,10 +761,9 @@ def _repeated_pictures(change: Array, reach: int = 7) -> NDArray[np.int64]:
     return np.flatnonzero(low & (change < 0.5 * np.nanmin(others, axis=1, initial=np.inf)))
 
 
-def _leaps(place: Array, repeated: NDArray[np.int64], reach: int = 4) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
+def _leaps(place: Array, reach: int = 4) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
     """Steps of a track that are a whole multiple, two or more, of what the steps around them are."""
     step = np.diff(place, axis=0)
-    step[repeated - 1] = np.nan  # a picture shown twice does not move
     jumps: list[int] = []
     missing: list[int] = []
     for i in range(len(step)):

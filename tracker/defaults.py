@@ -21,7 +21,7 @@ DEFAULT_U: dict[str, Default] = {
     ),
     "board.offset_m": Default(0.003, False, "m", "a tape held between board and line"),
     "board.lean_deg": Default(0.5, False, "deg", "a board stood upright by eye or with a small level"),
-    "board.yaw_deg": Default(1.0, False, "deg", "a board squared to the bench by eye"),
+    "board.yaw_deg": Default(0.5, False, "deg", "a board squared to the bench by eye"),
     "camera.distance_m": Default(0.02, True, "m", "a tape to the lens whose nodal point is not marked"),
     "datum.origin_px": Default(1.5, False, "px", "a point placed by hand on the picture"),
     "datum.floor_px": Default(1.5, False, "px", "a point placed by hand on the picture"),

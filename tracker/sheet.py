@@ -204,6 +204,7 @@ class SheetFile:
     sheet: Sheet
     path: Path
     tables: dict[str, Any]  # as merged, before defaults
+    station: str | None = None  # the station sheet that was pulled in
     used_defaults: dict[str, Default] = field(default_factory=dict)  # filled by u() and by note_default()
 
     def beside(self, name: str) -> Path:
@@ -331,7 +332,7 @@ def sheet_from_tables(tables: dict[str, Any], path: Path) -> SheetFile:
             f"{path.name}: clip.window_s is {list(window)}, which is empty.",
             "Write [from, to] in seconds, from below to.",
         )
-    return SheetFile(sheet, path.resolve(), merged)
+    return SheetFile(sheet, path.resolve(), merged, station)
 
 
 def _merge(base: dict[str, Any], over: dict[str, Any]) -> dict[str, Any]:

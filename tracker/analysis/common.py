@@ -34,11 +34,11 @@ def add_release(evaluation: Evaluation, release: Release | None) -> Evaluation:
 
 
 def accelerations(
-    evaluation: Evaluation, track: Track, window_s: tuple[float, float], gravity: float, extra: dict[str, object]
+    evaluation: Evaluation, track: Track, window_s: tuple[float, float], gravity: float, extra: dict[str, object], parabola: bool = False
 ) -> tuple[Evaluation, ConstantAcceleration | None]:
     """`effective_acceleration_mps2` and `acceleration_ratio` over a window, or why they are absent."""
     names = ("effective_acceleration_mps2", "acceleration_ratio")
-    fit = constant_acceleration(track, window_s)
+    fit = constant_acceleration(track, window_s, parabola)
     if fit is None:
         reason = f"only {within(track, window_s).size} frames measured from {window_s[0]:.3f} to {window_s[1]:.3f} s"
         return with_reason(evaluation, reason, *names), None

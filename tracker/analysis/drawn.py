@@ -6,7 +6,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from tracker.analysis.common import with_reason
-from tracker.analysis.fits import fit_linear, polynomial_rows, smooth_noise
+from tracker.analysis.fits import fit_linear, polynomial_rows, rough_noise
 from tracker.analysis.kinematics import frame_steps
 from tracker.analysis.tracks import Estimate, Evaluation, Finding, PayoutTrack
 
@@ -74,7 +74,7 @@ def evaluate(track: PayoutTrack, setup: DrawnSetup) -> Evaluation:
     window = (float(t[0]), float(t[-1]))
     snags = find_snags(t, v, u)
     steps = frame_steps(t)
-    noise = smooth_noise(t, v, steps)
+    noise = rough_noise(v, steps)
     noise = replace(noise, sigma=max(noise.sigma, float(np.sqrt(np.nanmean(u**2)))))
     level = fit_linear(np.ones((t.size, 1)), v, steps, noise)
     mean = float(level.parameters[0])

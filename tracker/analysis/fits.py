@@ -25,6 +25,8 @@ __all__ = [
 ]
 
 Floats = NDArray[np.float64]
+FEWEST_DOF = 4.0  # below, an effective number of degrees of freedom says nothing
+NEIGHBOURS = 0.5  # correlation of neighbouring frames' errors where the series itself cannot tell it from motion
 STRONGEST = 0.95  # an autocorrelation above this is a drift, not noise
 
 
@@ -102,7 +104,7 @@ def noise_of(residuals: Floats, steps: Floats, parameters: int) -> Noise:
     effective = n * (1 - rho) / (1 + rho)
     lost = min(parameters, 0.8 * effective) if rho > 0 else parameters
     sigma = float(np.sqrt(variance * effective / max(effective - lost, 0.2 * effective))) if rho > 0 else sigma
-    return Noise(sigma, rho, float(max(effective - lost, 1.0)))
+    return Noise(sigma, rho, float(max(effective - lost, FEWEST_DOF)))
 
 
 def smooth_noise(t: Floats, y: Floats, steps: Floats, degree: int = 6) -> Noise:
@@ -111,6 +113,22 @@ def smooth_noise(t: Floats, y: Floats, steps: Floats, degree: int = 6) -> Noise:
     rows, _, _ = polynomial_rows(t, degree)
     parameters, *_ = linalg.lstsq(rows, y, lapack_driver="gelsy")
     return noise_of(y - rows @ parameters, steps, degree + 1)
+
+
+def rough_noise(y: Floats, steps: Floats) -> Noise:
+    """Noise of a series that also moves in ways no polynomial follows: from its third differences.
+
+    What is slower than a few frames counts as motion; the correlation of neighbouring frames, which cannot be told
+    from it, is taken as `NEIGHBOURS`. A first-order autoregression of correlation r has third differences of variance
+    sigma^2 (20 - 30 r + 12 r^2 - 2 r^3).
+    """
+    whole = np.flatnonzero((steps[3:] - steps[:-3]) < 3.5)
+    if whole.size < 4:
+        return smooth_noise(steps, y, steps)
+    third = (y[3:] - 3 * y[2:-1] + 3 * y[1:-2] - y[:-3])[whole]
+    r = NEIGHBOURS
+    sigma = float(np.sqrt(np.mean(third**2) / (20 - 30 * r + 12 * r**2 - 2 * r**3)))
+    return Noise(sigma, r, max(whole.size / 3.0, FEWEST_DOF))
 
 
 def fit_linear(rows: Floats, y: Floats, steps: Floats, noise: Noise | None = None) -> LinearFit:
@@ -141,7 +159,8 @@ def fit_linear(rows: Floats, y: Floats, steps: Floats, noise: Noise | None = Non
     scale = np.sqrt((rows**2).sum(axis=0))
     q, r, order = linalg.qr(rows / scale, mode="economic", pivoting=True)
     inverse = np.zeros((p, n))
-    inverse[order] = linalg.solve_triangular(r, q.T)
+    # a few by a few: inverted outright, which no linear algebra library spreads over threads that wait for each other
+    inverse[order] = np.linalg.inv(r) @ q.T
     inverse /= scale[:, None]
     parameters = inverse @ y
     residuals = y - rows @ parameters

@@ -93,7 +93,7 @@ def evaluate(track: Track, setup: FreeDropSetup) -> Evaluation:
     release = find_release(track, setup.gravity, reach_m=np.inf)
     out = add_release(Evaluation(), release)
     window = setup.window_s or _default_window(track, release.t_s if release is not None else None)
-    out, fit = accelerations(out, track, window, setup.gravity, {})
+    out, fit = accelerations(out, track, window, setup.gravity, {}, parabola=True)
     if fit is None:
         return replace(out, absent={**out.absent, "measured_gravity_mps2": out.absent["effective_acceleration_mps2"]})
     started = release.t_s if release is not None else float(fit.t_s[0])

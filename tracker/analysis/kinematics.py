@@ -6,7 +6,7 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy import optimize
 
-from tracker.analysis.fits import Noise, fit_linear, noise_of, polynomial_rows, smooth_noise
+from tracker.analysis.fits import Noise, fit_linear, noise_of, polynomial_rows, rough_noise, smooth_noise
 from tracker.analysis.tracks import Track
 
 __all__ = [
@@ -62,13 +62,15 @@ def frame_steps(t_s: Floats) -> Floats:
     return np.asarray((t_s - t_s[0]) / np.median(np.diff(t_s)), dtype=float)
 
 
-def constant_acceleration(track: Track, window_s: tuple[float, float]) -> ConstantAcceleration | None:
+def constant_acceleration(track: Track, window_s: tuple[float, float], parabola: bool) -> ConstantAcceleration | None:
     """Fit the unweighted quadratic of design section 3 over a window.
 
     Parameters
     ----------
     track : Track
     window_s : (float, float)
+    parabola : bool
+        Whether motion should be a parabola, so that what a smooth curve leaves is noise.
 
     Returns
     -------
@@ -78,14 +80,15 @@ def constant_acceleration(track: Track, window_s: tuple[float, float]) -> Consta
     Notes
     -----
     The measurand is the best-fitting constant acceleration, so what the parabola leaves where motion follows another
-    law is not noise. The noise comes from what a polynomial of degree six leaves.
+    law is not noise. The noise of a fall comes from what a polynomial of degree six leaves, that of jerky motion
+    (links that land one by one) from third differences.
     """
     index = within(track, window_s)
     if index.size < 7:
         return None
     t, z = track.t_s[index], track.z_m[index]
     steps = frame_steps(t)
-    noise = smooth_noise(t, z, steps)
+    noise = smooth_noise(t, z, steps) if parabola else rough_noise(z, steps)
     rows, _, half = polynomial_rows(t, 2)
     fit = fit_linear(rows, z, steps, noise)
     # P2 = (3 x^2 - 1)/2: second derivative 3 in scaled time

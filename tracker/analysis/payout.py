@@ -12,7 +12,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from tracker.analysis.common import with_reason
-from tracker.analysis.fits import fit_linear, polynomial_rows, smooth_noise
+from tracker.analysis.fits import fit_linear, polynomial_rows, rough_noise
 from tracker.analysis.kinematics import frame_steps
 from tracker.analysis.tracks import Estimate, Evaluation, Finding, PayoutTrack
 
@@ -184,7 +184,7 @@ def evaluate(track: PayoutTrack, setup: PayoutSetup) -> Evaluation:
 
 
 def _mean(t_s: Floats, values: Floats, us: Floats, window: tuple[float, float]) -> _Mean | None:
-    """Time mean over a window; its noise from what a smooth curve leaves, and no less than the frames' own."""
+    """Time mean over a window. What ripples is the arc, not noise; noise is no less than the frames' own."""
     index = np.flatnonzero(
         np.isfinite(values) & np.isfinite(t_s) & (t_s >= window[0] - 1e-9) & (t_s <= window[1] + 1e-9)
     )
@@ -192,7 +192,7 @@ def _mean(t_s: Floats, values: Floats, us: Floats, window: tuple[float, float]) 
         return None
     t, y = t_s[index], values[index]
     steps = frame_steps(t)
-    noise = smooth_noise(t, y, steps)
+    noise = rough_noise(y, steps)
     own = float(np.sqrt(np.nanmean(us[index] ** 2))) if np.isfinite(us[index]).any() else 0.0
     noise = replace(noise, sigma=max(noise.sigma, own))
     rows, _, half = polynomial_rows(t, 1)

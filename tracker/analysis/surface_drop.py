@@ -137,7 +137,7 @@ def _control(track: Track, setup: SurfaceDropSetup, release: Release | None, out
     ok = track.t_s[np.isfinite(track.z_m) & np.isfinite(track.t_s)]
     frame = float(np.median(np.diff(ok))) if ok.size > 1 else 0.0
     begin = release.t_s + 2 * frame if release is not None else (float(ok[0]) if ok.size else 0.0)
-    out, _ = accelerations(out, track, setup.window_s or (begin, clear_end(track)), setup.gravity, {})
+    out, _ = accelerations(out, track, setup.window_s or (begin, clear_end(track)), setup.gravity, {}, parabola=True)
     reason = "no surface is known: line.length_m with test.drop_height_m or datum.floor_px is missing, so this is a control run"
     out = with_reason(out, reason, "landing_coefficient", "lead_over_free_fall_s", "first_touch_s")
     finding = Finding("no-surface", f"Taken as a control run: {reason}.", "", "For a landing, give test.drop_height_m.")
@@ -178,7 +178,8 @@ def _lead(track: Track, setup: SurfaceDropSetup, release: Release | None, touch:
     slope = np.array([1.0, duration]) / v_end
     u = float(np.hypot(np.sqrt(slope @ fit.covariance @ slope), at_end[2] / v_end))
     extra: dict[str, object] = {
-        "at_z_m": at_end[0], "lead_m": float(at_end[0] - z0 + v0 * (window[1] - touch) + 0.5 * setup.gravity * (window[1] - touch) ** 2) * -1.0,
+        "at_z_m": at_end[0],
+        "lead_m": float(z0 - v0 * (window[1] - touch) - 0.5 * setup.gravity * (window[1] - touch) ** 2 - at_end[0]),
         "speed_at_touch_mps": v0,
     }  # fmt: skip
     words = "time by which the end is at its place at the window's end before free fall with its place and speed at first touch"
@@ -216,7 +217,7 @@ def _law(track: Track, setup: SurfaceDropSetup, touch: float, floor: float, out:
         findings += (
             Finding(
                 "law-misfit",
-                f"The landing law does not describe this run: it leaves {1e3 * rms:.2f} mm RMS and up to {1e3 * worst:.1f} mm at {when:.3f} s.",
+                f"The landing law does not describe this run: leaves {1e3 * rms:.2f} mm RMS, up to {1e3 * worst:.1f} mm ({when:.3f} s).",
                 "The landing coefficient is a mean over pieces that land one by one; read the acceleration instead.",
                 "",
             ),

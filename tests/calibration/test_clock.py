@@ -73,6 +73,7 @@ def test_the_ramp_of_the_footage_is_found_and_every_frame_is_one_capture_step() 
     ticks, base = stamps_of("made-here/walkers_ramp_8x.mp4")
     clock = make_clock(ticks, base, capture_fps=240.0, stored_size=(768, 576), name="walkers")
     np.testing.assert_allclose(clock.frame_s, np.arange(60) / 240, atol=1e-12)
+    assert clock.u_stamp_s == pytest.approx(1 / (3000 * 240) / np.sqrt(12))  # rounding of the shortest step, 3000 ticks
     assert codes(clock) == ["ramped"]
     assert "between 3.75 and 30 a second" in clock.notices[0].says and clock.notices[0].says.startswith("walkers: ")
     with pytest.raises(CannotMeasure, match=r"walkers: .*ramp.*no capture rate") as caught:
@@ -236,6 +237,22 @@ def test_any_rate_on_any_time_base_comes_back_regular(fps: float, base: Fraction
     assert clock.u_stamp_s < tick
 
 
+@pytest.mark.parametrize("jitter_ticks", [0.0, 0.05, 0.1, 0.15])
+def test_u_of_a_smoothed_stamp_covers_the_jitter_that_rounding_hides(jitter_ticks: float, rng: np.random.Generator) -> None:
+    """Frames that jitter by less than a tick are smoothed; what is lost by that must be inside u_stamp_s, and not far inside."""
+    ratios = []
+    for _ in range(60):
+        jitter = rng.normal(0, jitter_ticks, 200)
+        ticks = np.rint(np.arange(200) * 41.7083 + rng.uniform() + jitter).astype(np.int64)
+        clock = make_clock(ticks, Fraction(1, 10000), stored_size=SIZE)
+        if "variable-frame-rate" in codes(clock):
+            continue  # kept as stamped: nothing is lost
+        ratios.append(jitter_ticks * 1e-4 / clock.u_stamp_s)
+    assert len(ratios) > 5
+    assert np.sqrt(np.mean(np.square(ratios))) < 1.6
+    assert clock.u_stamp_s < 1e-4 * 0.5
+
+
 def test_the_varying_rate_of_the_footage_is_kept_and_its_faults_are_named() -> None:
     """truth.json: source frames 20 to 22 dropped after frame 19; frame 40 repeated behind good stamps."""
     truth = json.loads(footage("made-here/truth.json").read_text(encoding="utf-8"))["walkers_vfr.mp4"]
@@ -308,6 +325,7 @@ def test_stamps_that_are_no_time_are_refused() -> None:
     seed=st.integers(0, 2**32 - 1),
 )
 @example(fps=907.75, base=Fraction(1, 15360), start=0, lost={12: 3}, jitter=0.03, seed=21)  # was called a gap of no whole number
+@example(fps=70.0, base=N90K, start=0, lost={3: 1, 4: 1, 5: 1}, jitter=0.0, seed=0)  # was called a ramp
 def test_laws_of_every_clock(fps: float, base: Fraction, start: int, lost: dict[int, int], jitter: float, seed: int) -> None:
     """Zero at the first frame, rising, true within a tick whatever is lost, shifted or jittered; losses counted."""
     periods = np.ones(120, dtype=int)
@@ -378,6 +396,7 @@ def test_scaling_and_another_readout_for_the_budget() -> None:
     longer = clock.scaled(1.001)
     np.testing.assert_allclose(longer.frame_s, clock.frame_s * 1.001)
     assert (longer.readout_s, longer.capture_fps) == (0.004, pytest.approx(240 / 1.001))
+    assert longer.u_stamp_s == pytest.approx(1.001 * clock.u_stamp_s)
     other = clock.with_readout(0.005)
     assert other.at(3, [0.0, 719.0]) == pytest.approx(3 / 240 + 0.005) and clock.readout_s == 0.004
 

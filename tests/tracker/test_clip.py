@@ -1,5 +1,6 @@
 """A clip against files that others measured (shared/footage/MANIFEST.md) and against files written here with known content."""
 
+import dataclasses
 import hashlib
 import json
 import pickle
@@ -183,10 +184,15 @@ def test_sampling_and_ranges_give_the_same_pictures(name: str) -> None:
         assert all((gray == every[i]).all() for i, gray in found)
 
 
-def test_a_lone_sample_is_reached_by_seeking(monkeypatch: pytest.MonkeyPatch) -> None:
-    """A file of several key frames: only the group of the frame asked for is decoded, and the picture is the same."""
+@pytest.mark.parametrize("fault", ["none", "seek lands late", "seek cannot be checked"])
+def test_a_lone_sample_is_reached_by_seeking(fault: str, monkeypatch: pytest.MonkeyPatch) -> None:
+    """A file of several key frames: only the group of the frame asked for is decoded, and the picture is the same.
+
+    A container whose seeks land behind the frame must cost time, never show another picture.
+    """
     clip = Clip(footage("container/roadtrip-vp92-10bit.webm"))
-    assert len(clip._index.key_ticks) > 1
+    keys = clip._index.key_ticks
+    assert len(keys) == 3
     every = dict(clip.frames())
     decoded: list[int] = []
     plain = tracker.clip._decoded
@@ -197,9 +203,13 @@ def test_a_lone_sample_is_reached_by_seeking(monkeypatch: pytest.MonkeyPatch) ->
             yield frame
 
     monkeypatch.setattr("tracker.clip._decoded", counted)
-    last = clip.frame_count - 1
-    np.testing.assert_array_equal(clip.sample([last])[0], every[last])
-    assert len(decoded) < clip.frame_count / 4
+    wanted = int(np.searchsorted(clip.ticks, keys[1])) + 3
+    if fault == "seek lands late":
+        clip._index = dataclasses.replace(clip._index, key_dts=(keys[2],) * 3)
+    if fault == "seek cannot be checked":
+        monkeypatch.setattr("tracker.clip._Reader._goes_to", lambda self, key: self._container.seek(keys[2], stream=self._stream) or True)
+    np.testing.assert_array_equal(clip.sample([wanted])[0], every[wanted])
+    assert (len(decoded) < clip.frame_count / 4) == (fault != "seek cannot be checked")
     assert clip.notices == ()
 
 
@@ -663,6 +673,27 @@ def test_pictures_after_damage_are_named(sound: bytes, sound_pictures: dict[int,
     assert len(frames) - len(clip.doubtful) >= 24
     sampled = clip.sample(list(range(48)))
     assert len(sampled) == len(frames)
+
+
+@pytest.mark.parametrize("seed", range(5))
+def test_traces_of_damage_before_it_in_display_order_are_named_too(seed: int, tmp_path: Path) -> None:
+    """B-frames lean on a damaged frame that is shown after them: doubt follows the order of decoding."""
+    sound = footage("made-here/walkers_h264.mp4")
+    data = bytearray(sound.read_bytes())
+    media, end = data.find(b"mdat"), data.find(b"moov")
+    for at in np.random.default_rng(seed).integers(media + 100, end - 100, 3):
+        data[at] ^= 0xFF
+    path = tmp_path / "flipped.mp4"
+    path.write_bytes(bytes(data))
+    with Clip(path) as clip:
+        changed = {i for (i, gray), whole in zip(clip.frames(), _matching(sound, clip), strict=True) if not (gray == whole).all()}
+        assert changed <= clip.doubtful
+
+
+def _matching(sound: Path, clip: Clip) -> Iterator[np.ndarray]:
+    """Frames of a sound clip that also decode in a damaged copy."""
+    here = {i for i, _ in clip.frames()}
+    return (gray for i, gray in Clip(sound).frames() if i in here)
 
 
 def test_unusable_files_are_one_sentence(sound: bytes, tmp_path: Path) -> None:

@@ -116,12 +116,13 @@ class Background:
         """What a frame of this shape would show in `roi` if there were no line, float32 grey levels."""
         x0, y0, x1, y1 = roi or (0, 0, shape[1], shape[0])
         if motion is None:
-            patch = self.gray[y0:y1, x0:x1]
+            patch = np.asarray(self.gray[y0:y1, x0:x1])
         else:
             flags = cv2.INTER_LINEAR | cv2.WARP_INVERSE_MAP
-            patch = cv2.warpAffine(
+            moved = cv2.warpAffine(
                 self.gray, _affine(motion, x0, y0), (x1 - x0, y1 - y0), flags=flags, borderMode=cv2.BORDER_REPLICATE
             )
+            patch = np.asarray(moved, dtype=np.float32)
         if light is None:
             return np.array(patch, dtype=np.float32)
         lit = patch * np.float32(light.gain)
@@ -176,7 +177,7 @@ class Background:
 
     def sigma(self, level: Any) -> NDArray[np.float32]:
         """Noise of pixels of the given brightness [grey levels]."""
-        return self.noise_by_level[np.clip(np.asarray(level), 0, 255).astype(np.intp)]
+        return np.asarray(self.noise_by_level[np.clip(np.asarray(level), 0, 255).astype(np.intp)])
 
     def _seen_at(
         self, rows: NDArray[np.intp], columns: NDArray[np.intp], motion: _Motion | None

@@ -174,8 +174,8 @@ class LineFollower:
         half = int(np.ceil(self.template.offset_px[-1] + spare))
         band, inside = self._band(gray, motion, light, curve, normal, half)
         size = np.abs(band)
-        along = max(3, int(round(self.repeat_px or max(self.width_px, 5.0))))
-        mean = cv2.blur(size, (1, along), borderType=cv2.BORDER_REPLICATE)
+        along = max(3, round(self.repeat_px or max(self.width_px, 5.0)))
+        mean = np.asarray(cv2.blur(size, (1, along), borderType=cv2.BORDER_REPLICATE), dtype=np.float32)
         step = int(_STATION_PX)
         at = np.arange(0, curve.shape[0], step)
         ridge = self._ridge(mean[at])
@@ -227,8 +227,8 @@ class LineFollower:
 
     def _ridge(self, mean: NDArray[np.float32]) -> NDArray[np.float32]:
         """Inside minus the brighter flank: a line stands out on both sides, the flank of a broad shadow does not."""
-        inner = max(1, int(round(self.width_px * 0.6)) | 1)
-        gap = int(round(self.width_px / 2 + 1))
+        inner = max(1, round(self.width_px * 0.6) | 1)
+        gap = round(self.width_px / 2 + 1)
         flank = 3
         inside = cv2.blur(mean, (inner, 1), borderType=cv2.BORDER_REPLICATE)
         side = cv2.blur(mean, (flank, 1), borderType=cv2.BORDER_REPLICATE)
@@ -272,7 +272,7 @@ class LineFollower:
         if seen_here.mean() < 0.5:
             return None
         good = np.maximum(height[section], 1e-3)
-        along = max(3, int(round(self.repeat_px or max(self.width_px, 5.0))))
+        along = max(3, round(self.repeat_px or max(self.width_px, 5.0)))
         noise = self.template.precision * np.hypot(self.background.noise / np.sqrt(along), misfit[section]) / good
         u = np.where(seen_here, np.clip(noise, 0.01, 2.0), 2.0)
         middle = _gather(band, index, shift + half, int(max(1, self.width_px // 4)))
@@ -482,7 +482,7 @@ def _even_with(
 ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
     """Points a pixel apart along the curve, with the values carried."""
     along = np.concatenate([[0.0], np.cumsum(np.hypot(*np.diff(points, axis=0).T))])
-    n = max(int(round(along[-1])), 2)
+    n = max(round(along[-1]), 2)
     s = np.linspace(0.0, along[-1], n + 1)
     even = np.column_stack([np.interp(s, along, points[:, 0]), np.interp(s, along, points[:, 1])])
     return even, np.interp(s, along, values)

@@ -87,7 +87,8 @@ def see_marks(brightness: Floats, seen: NDArray[np.bool_], average_px: float, wi
     smooth = np.convolve(np.pad(brightness, kernel.size // 2, mode="edge"), kernel, mode="valid")[:n]
     coarse = smooth[::_COARSE]
     reach = max(3, int(window_px / _COARSE) // 2)
-    window = np.lib.stride_tricks.sliding_window_view(np.pad(coarse, reach, mode="reflect" if coarse.size > reach else "edge"), 2 * reach + 1)
+    padded = np.pad(coarse, reach, mode="reflect" if coarse.size > reach else "edge")
+    window = np.lib.stride_tricks.sliding_window_view(padded, 2 * reach + 1)
     middle = np.interp(np.arange(n), np.arange(coarse.size) * _COARSE, np.median(window, axis=1))
     out = np.where(seen, smooth - middle, 0.0)
     scatter = 1.4826 * float(np.median(np.abs(out[seen]))) if seen.any() else 0.0
@@ -230,7 +231,7 @@ def _chains(sights: list[list[MarkSight]], steps: Floats, spacing_m: float | Non
     done: list[list[MarkSight]] = []
     for k, here in enumerate(sights):
         free = list(here)
-        still_open = []
+        still_open: list[list[MarkSight]] = []
         for chain in open_:
             last = chain[-1]
             expected = last.sigma_m + travelled[k] - travelled[last.frame]

@@ -182,7 +182,7 @@ def _longest(
     path = [end]
     while path[-1] != start:
         path.append(int(before[path[-1]]))
-    return members[np.array(path[::-1])]
+    return np.asarray(members[np.array(path[::-1])], dtype=np.intp)
 
 
 def _near(point: NDArray[np.float64], origin: NDArray[np.float64]) -> float:

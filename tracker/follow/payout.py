@@ -72,6 +72,8 @@ class PayoutFrame:
         Distance of the legs at half the apex's height, radius of curvature at the top [m].
     legs_px : (2, 2) array
         The two places of the width.
+    apex_plane_px, legs_plane_px : (2,) and (2, 2) arrays
+        The same places with the camera's movement taken out: what the plane maps to metres.
     marks_px : (m, 2) array
         Marks followed, in this frame.
     flags : tuple of str
@@ -89,6 +91,8 @@ class PayoutFrame:
     radius_m: float
     u_radius_m: float
     legs_px: Floats
+    apex_plane_px: Floats
+    legs_plane_px: Floats
     marks_px: Floats
     flags: tuple[str, ...]
 
@@ -127,6 +131,7 @@ class _Kept:
     """What remains of one frame while the clip streams by."""
 
     frame: int
+    motion: Any = None
     arc: Arc | None = None
     u_apex_m: float = np.nan
     sights: list[MarkSight] = field(default_factory=list)
@@ -187,7 +192,7 @@ class _Reader:
         self.background, self.plane, self.clock, self.hints = background, plane, clock, hints
         self.px_per_m, up = _scale_and_up(plane, hints.origin_px)
         repeat = None if hints.pitch_m is None else hints.pitch_m * self.px_per_m
-        self.follower = LineFollower(background, tuple(hints.origin_px), repeat, up)
+        self.follower = LineFollower(background, (float(hints.origin_px[0]), float(hints.origin_px[1])), repeat, up)
         self.up = np.asarray(up)
         self.average_px = repeat if repeat is not None else max(3.0, 0.004 * self.px_per_m)
         self.kept: list[_Kept] = []
@@ -196,7 +201,7 @@ class _Reader:
         self.last_along: tuple[int, Along] | None = None
 
     def read(self, index: int, gray: NDArray[np.uint8], motion: Any) -> None:
-        kept = _Kept(index)
+        kept = _Kept(index, motion)
         self.kept.append(kept)
         line = self.follower.follow(index, gray, motion)
         if line is None:
@@ -347,12 +352,16 @@ class _Reader:
         if arc is None:
             return PayoutFrame(
                 kept.frame, line, kept.u_line_px, _NAN2, _NAN2, np.nan, t, np.nan, np.nan, np.nan,
-                np.full((2, 2), np.nan), at, tuple(flags),
+                np.full((2, 2), np.nan), _NAN2, np.full((2, 2), np.nan), at, tuple(flags),
             )  # fmt: skip
         up = float(light.vector_px @ self.up)  # one lamp moves both legs the same way: the width stays
+        apex, legs = arc.apex_px + up * self.up, arc.legs_px
+        still = kept.motion is None
         return PayoutFrame(
-            kept.frame, line, kept.u_line_px, arc.apex_px + up * self.up, arc.apex_m + [0.0, up / self.px_per_m],
-            kept.u_apex_m, t, arc.width_m, arc.radius_m, arc.u_radius_m, arc.legs_px, at, tuple(flags),
+            kept.frame, line, kept.u_line_px, apex, arc.apex_m + np.array([0.0, up / self.px_per_m]),
+            kept.u_apex_m, t, arc.width_m, arc.radius_m, arc.u_radius_m, legs,
+            apex if still else np.asarray(kept.motion.undo(apex)), legs if still else np.asarray(kept.motion.undo(legs)),
+            at, tuple(flags),
         )  # fmt: skip
 
     def _notices(self, kept: list[_Kept], speed: SpeedSeries, tracks: list[MarkTrack]) -> tuple[Notice, ...]:
@@ -370,7 +379,8 @@ class _Reader:
             out.append(
                 Notice(
                     "speed-ambiguous",
-                    f"The texture repeats itself every {speed.alias_step_mps:.2f} m/s at this frame rate: the median speed may be {named} m/s.",
+                    f"The texture looks alike every {speed.alias_step_mps:.2f} m/s at this frame rate: the median speed may be "
+                    f"{named} m/s.",
                     "Line speed is not stated as sure.",
                     "Put marks on the line some 0.3 m apart, or start the clip with the line at rest.",
                 )
@@ -379,22 +389,13 @@ class _Reader:
             out.append(
                 Notice("no-speed", speed.basis, "Line speed is not measured.", "Put marks of tape on the line some 0.3 m apart.")
             )
-        u = np.hypot(speed.u_mark_ratio, 0.005)
-        if np.isfinite(speed.mark_ratio) and abs(speed.mark_ratio - 1) > 3 * u:
-            out.append(
-                Notice(
-                    "marks-against-scale",
-                    f"The marks measure {100 * (speed.mark_ratio - 1):+.2f} % of their stated spacing on the board's scale.",
-                    "Lengths and speeds may be out by as much.", "Check mark_spacing_m, square_m, offset_m and distance_m.",
-                )
-            )  # fmt: skip
         return tuple(out)
 
 
 def _scale_and_up(plane: _Plane, origin_px: tuple[float, float]) -> tuple[float, tuple[float, float]]:
     """Pixels per metre at the rim and the picture's direction against gravity there."""
     o = np.asarray(origin_px, dtype=float)
-    at = plane.to_metres(np.array([o, o + [20.0, 0.0], o + [0.0, 20.0]]))
+    at = plane.to_metres(o + np.array([[0.0, 0.0], [20.0, 0.0], [0.0, 20.0]]))
     jacobian = np.column_stack([(at[1] - at[0]) / 20.0, (at[2] - at[0]) / 20.0])  # metres per pixel
     up = np.linalg.solve(jacobian, np.array([0.0, 1.0]))
     return float(np.hypot(*up)), tuple(up / np.hypot(*up))
@@ -409,7 +410,8 @@ def _metres(plane: _Plane, points: Floats) -> Floats:
     affine = np.linalg.lstsq(design, at, rcond=None)[0]
     off = at - design @ affine
     index = np.arange(n)
-    return points @ affine[:2] + affine[2] + np.column_stack([np.interp(index, nodes, off[:, 0]), np.interp(index, nodes, off[:, 1])])
+    rest = np.column_stack([np.interp(index, nodes, off[:, 0]), np.interp(index, nodes, off[:, 1])])
+    return np.asarray(points @ affine[:2] + affine[2] + rest)
 
 
 def _pace_of(doubt_m: Floats, frame_s: Floats) -> Floats:
@@ -452,7 +454,7 @@ def _scatter_of_apexes(kept: list[_Kept], at_s: Floats) -> None:
     have = np.array([i for i, k in enumerate(kept) if k.arc is not None], dtype=np.intp)
     if have.size < 12:
         return
-    z = np.array([kept[i].arc.apex_m[1] for i in have])  # type: ignore[union-attr]
+    z = np.array([k.arc.apex_m[1] for k in kept if k.arc is not None])
     third = z[3:] - 3 * z[2:-1] + 3 * z[1:-2] - z[:-3]
     whole = (np.diff(have)[2:] == 1) & (np.diff(have)[1:-1] == 1) & (np.diff(have)[:-2] == 1)
     if whole.sum() < 8:

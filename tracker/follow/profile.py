@@ -189,12 +189,12 @@ def side_light(pool: ProfilePool) -> SideLight:
         angle = (k + 0.5) * width - np.pi
         if pool.count[k] < 50:
             continue
-        offset, u = side_light_offset(pool.offset_px, pool.total[k] / pool.count[k])
-        rows.append((np.cos(angle), np.sin(angle), offset, u, pool.count[k]))
+        middle, doubt = side_light_offset(pool.offset_px, pool.total[k] / pool.count[k])
+        rows.append((np.cos(angle), np.sin(angle), middle, doubt, pool.count[k]))
     if len(rows) < 3:
         return SideLight.unknown()
     c, s, offset, u, count = (np.array(x) for x in zip(*rows, strict=True))
-    weight = np.sqrt(count) / np.hypot(u, 0.05) ** 2
+    weight = np.asarray(np.sqrt(count) / np.hypot(u, 0.05) ** 2)
     design = np.column_stack([c, s])
     normal = design.T @ (weight[:, None] * design) + 1e-3 * weight.sum() * np.eye(2)
     vector = np.linalg.solve(normal, design.T @ (weight * offset))
@@ -202,8 +202,8 @@ def side_light(pool: ProfilePool) -> SideLight:
     spread = float(np.sqrt((weight * left**2).sum() / weight.sum()))
     typical = float((weight * u).sum() / weight.sum())
     # A flank as bright as the scene behind it hides its edge, and the correction then stops short: half of it is in doubt.
-    doubt = np.hypot(_LEAST_DOUBT_PX, 0.5 * float(np.hypot(*vector)))
-    return SideLight(vector, float(np.hypot(max(spread, typical), doubt)))
+    unsure = np.hypot(_LEAST_DOUBT_PX, 0.5 * float(np.hypot(*vector)))
+    return SideLight(vector, float(np.hypot(max(spread, typical), unsure)))
 
 
 def side_light_offset(offset_px: NDArray[np.float64], profile: NDArray[np.float64]) -> tuple[float, float]:
@@ -224,7 +224,7 @@ def side_light_offset(offset_px: NDArray[np.float64], profile: NDArray[np.float6
         left = _crossing(offset_px[: over[0] + 1][::-1], p[: over[0] + 1][::-1], share * high)
         right = _crossing(offset_px[over[-1] :], p[over[-1] :], share * high)
         middles.append(0.5 * (left + right))
-    return float(np.mean(middles)), float(max(np.std(middles), 0.03))
+    return float(np.mean(middles)), max(float(np.std(middles)), 0.03)
 
 
 def _crossing(offset: NDArray[np.float64], falling: NDArray[np.float64], value: float) -> float:

@@ -14,6 +14,7 @@ join where the marks say beyond doubt which whole number of pitches belongs to t
 unwrapped from rest if the clip shows the rest, else it is given with its other candidates and called ambiguous.
 """
 
+import itertools
 from dataclasses import dataclass, replace
 from typing import Literal
 
@@ -32,7 +33,9 @@ Verdict = Literal["sure", "ambiguous", "none"]
 _KNOT_FRAMES = 4.0
 _MOST_KNOTS = 500
 _REACH_FRAMES = 6  # a frame farther than this from any observation has no speed
+_U_RATIO = 0.05  # of spacing or pitch as measured to as stated, before anything is measured
 _U_PLACEMENT = 0.005  # relative, of one mark's place on the line where nothing else is said
+_ODD_RATIO = 0.06
 _MOST_ACCELERATION = 100.0  # m/s^2
 _POWERS = np.arange(-2.0, 5.01, 0.5)
 _BLOCK_FRAMES, _FOLDS = 12, 4
@@ -150,7 +153,6 @@ def _from_marks(
     fit.solve()
     pitch_ratio = u_pitch = alias = np.nan
     basis = f"{len(tracks)} marks followed along the line, {rows.t.size} sights"
-    conflict = np.zeros(frame_s.size, bool)
     if texture is not None and np.isfinite(texture.u_m).sum() >= 5:
         alias = texture.pitch_m / float(np.median(np.diff(frame_s)))
         joined = _join(texture, fit)
@@ -164,7 +166,11 @@ def _from_marks(
             basis += "; the texture does not follow them and is left out"
     v, u_v, paid, u_paid = fit.at(at_s)
     near = _near(at_s, np.concatenate([rows.t, texture.from_s[np.isfinite(texture.u_m)]] if texture is not None else [rows.t]), frame_s)
-    verdict = np.where(near, np.where(conflict, "ambiguous", "sure"), "none")
+    off = abs(fit.ratio - 1.0)
+    conflict = bool(off > _ODD_RATIO)  # then they are not the marks that the sheet means, or were joined wrongly
+    if conflict:
+        basis += f"; they measure {100 * off:.0f} % off their stated spacing, which no scale error explains"
+    verdict = np.where(near, "ambiguous" if conflict else "sure", "none")
     v, u_v, paid, u_paid = (np.where(near, x, np.nan) for x in (v, u_v, paid, u_paid))
     return SpeedSeries(
         at_s, v, u_v, paid, u_paid, verdict.astype(np.str_), (), basis + ".", fit.ratio, fit.u_ratio,
@@ -271,7 +277,7 @@ class _Fit:
         d = np.diff(np.eye(self.size), n=3, axis=0)
         penalty[: self.size, : self.size] = d.T @ d
         weight = 1.0 / u**2
-        power = None
+        power = 0.0
         for turn in range(4):  # reweighted: a sight that belongs to another mark or to a glint must not pull
             if turn in (0, 2):
                 power = self._power(x, y, weight, penalty, held_x, held_y, held_u, group)
@@ -319,13 +325,13 @@ class _Fit:
         held, y, u = [first[0]], [0.0], [1e-6]
         ratio = np.zeros(width)
         ratio[self.size + self.marks] = 1.0
-        held.append(ratio), y.append(1.0), u.append(0.02)
+        held, y, u = [*held, ratio], [*y, 1.0], [*u, _U_RATIO]
         stretch = np.zeros(width)
         stretch[self.size + self.marks + 1] = 1.0
-        held.append(stretch), y.append(0.0), u.append(0.03)
+        held, y, u = [*held, stretch], [*y, 0.0], [*u, _U_RATIO]
         if self.spacing_m is not None:
             for row in self._spacings(width):
-                held.append(row), y.append(0.0), u.append(_U_PLACEMENT * self.spacing_m)
+                held, y, u = [*held, row], [*y, 0.0], [*u, _U_PLACEMENT * self.spacing_m]
         return np.array(held), np.array(y), np.array(u)
 
     def _spacings(self, width: int) -> list[Floats]:
@@ -335,7 +341,7 @@ class _Fit:
         r = self.rows
         place = np.array([_rough_place(r, k) for k in range(self.marks)])
         order = np.argsort(place)
-        for a, b in zip(order[:-1], order[1:], strict=True):
+        for a, b in itertools.pairwise(order):
             whole = (place[b] - place[a]) / self.spacing_m
             if round(whole) >= 1 and abs(whole - round(whole)) < 0.1 * max(1, round(whole)) and round(whole) <= 3:
                 row = np.zeros(width)

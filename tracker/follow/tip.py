@@ -227,7 +227,8 @@ def _solved(rows: Floats, values: Floats, weight: Floats, precision: Floats | No
     weighted = rows * weight
     normal = weighted @ rows.T
     flat = normal.ravel()[:: len(normal) + 1]
-    flat += 1e-9 * flat.mean() + 1e-12
+    flat *= 1.0 + 1e-9  # each row in its own units: an even scene makes two of them the same
+    flat += 1e-12
     right = weighted @ values
     if precision is not None and pull is not None:
         flat += precision
@@ -426,7 +427,8 @@ def find_tip(
     """
     difference = np.asarray(seen, dtype=np.float32) - np.asarray(scene, dtype=np.float32)
     best, best_score = None, 0.0
-    for point, direction in tip_candidates(difference, corner, near, line.width_px, noise, reach_px=reach_px):
+    drawn = line.width_px + (0.0 if way is None else 0.5 * float(np.hypot(*way)))  # what is blurred is wider, or longer
+    for point, direction in tip_candidates(difference, corner, near, drawn, noise, reach_px=reach_px):
         fit = fit_tip(seen, scene, corner, point, direction, line, way=way, noise=noise)
         if fit is None or not _sure(fit, line, noise, contrast):
             continue

@@ -98,7 +98,9 @@ def _measure_one(sheet: Path, folder: Path, overlay: bool, replace: bool, quiet:
         refuse_existing(folder)
     with _progress(sheet.name) as tell:
         measured = measure_run(sheet, progress=tell)
-        write_folder(measured.result, folder, frames=measured.frames, overlay=overlay, progress=tell, replace=replace)
+        write_folder(
+            measured.result, folder, frames=measured.frames, sample=measured.sample, overlay=overlay, progress=tell, replace=replace
+        )
     screen, errors = _console(sys.stdout), _console(sys.stderr)
     if quiet:
         screen.print(one_line(measured.result, folder), soft_wrap=True, highlight=False, markup=False)

@@ -18,7 +18,10 @@ from pydantic import BaseModel, ConfigDict, Field, ValidationError, model_valida
 from calibration.notice import BadInput
 from tracker.defaults import DEFAULT_U, Default
 
-__all__ = ["KINDS", "Kind", "Sheet", "SheetFile", "load_sheet", "read_toml", "sheet_from_tables", "sheet_keys"]
+__all__ = [
+    "KINDS", "Bench", "Kind", "Section", "Sheet", "SheetFile", "bench_of", "load_sheet", "read_toml", "sections",
+    "sheet_from_tables", "sheet_keys",
+]  # fmt: skip
 
 Kind = Literal["payout", "surface-drop", "held-drop", "edge-slide", "free-drop", "drawn"]
 KINDS: tuple[str, ...] = get_args(Kind)
@@ -249,10 +252,8 @@ class SheetFile:
 def sheet_keys() -> list[str]:
     """Every key of a run sheet as ``table.key``, for the manual and for nearest-key suggestions."""
     keys = ["station"]
-    for table, info in Sheet.model_fields.items():
-        model = info.annotation
-        if isinstance(model, type) and issubclass(model, Section):
-            keys += [f"{table}.{name}" for name in model.model_fields if name != "uncertainties"]
+    for table, model in sections().items():
+        keys += [f"{table}.{name}" for name in model.model_fields if name != "uncertainties"]
     return [*keys, "limits.<quantity>"]
 
 
@@ -343,7 +344,8 @@ def _merge(base: dict[str, Any], over: dict[str, Any]) -> dict[str, Any]:
     return out
 
 
-def _models() -> dict[str, type[Section]]:
+def sections() -> dict[str, type[Section]]:
+    """The tables of a run sheet by name."""
     return {
         name: info.annotation
         for name, info in Sheet.model_fields.items()
@@ -352,7 +354,7 @@ def _models() -> dict[str, type[Section]]:
 
 
 def _refuse_unknown_keys(tables: dict[str, Any], path: Path) -> None:
-    models = _models()
+    models = sections()
     known_tables = [*models, "limits", "station"]
     everywhere = {f"{t}.{k}" for t, m in models.items() for k in m.model_fields if k != "uncertainties"}
     for table, content in tables.items():
@@ -385,12 +387,12 @@ def _nearest(key: str, known: list[str]) -> str:
 
 def _refuse_wrong_units(tables: dict[str, Any], path: Path) -> None:
     """A value outside every bench is refused, and where a power of ten brings it inside, that is said."""
-    for table, model in _models().items():
+    for table, model in sections().items():
         content = tables.get(table)
         if not isinstance(content, dict):
             continue
-        for key, info in model.model_fields.items():
-            bench = next((m for m in _metadata(info) if isinstance(m, Bench)), None)
+        for key in model.model_fields:
+            bench = bench_of(model, key)
             value = content.get(key)
             if bench is None or isinstance(value, bool) or not isinstance(value, int | float):
                 continue
@@ -402,6 +404,11 @@ def _refuse_wrong_units(tables: dict[str, Any], path: Path) -> None:
                 f"{path.name}: {table}.{key} is {value:g}, outside the {bench.low:g} to {bench.high:g} that a bench can have.",
                 _probable_unit(key, float(value), bench),
             )
+
+
+def bench_of(model: type[Section], key: str) -> Bench | None:
+    """The range that a bench can have for a key, where one is stated."""
+    return next((m for m in _metadata(model.model_fields[key]) if isinstance(m, Bench)), None)
 
 
 def _metadata(info: Any) -> list[Any]:

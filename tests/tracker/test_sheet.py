@@ -123,3 +123,14 @@ def test_keys_of_the_contract_are_known():
     wanted = {f"{table}.{key}" for table, keys in contract.items() for key in keys.split()}
     assert wanted <= set(sheet_keys())
     assert set(KINDS) == {"payout", "surface-drop", "held-drop", "edge-slide", "free-drop", "drawn"}
+
+
+def test_the_manual_is_current_and_knows_every_key():
+    from tracker.manual import manual
+
+    text = (Path(__file__).parents[2] / "docs" / "run-sheet.md").read_text(encoding="utf-8")
+    assert text == manual(), "run: python -m tracker.manual"
+    for key in sheet_keys():
+        name = key.split(".")[-1]
+        assert f"`{name}" in text or f"[{name}]" in text or name == "<quantity>", key
+    assert "| 3 | the footage cannot carry" in text

@@ -175,7 +175,8 @@ def evaluate(track: PayoutTrack, setup: PayoutSetup) -> Evaluation:
             out = with_reason(out, "measured in too few frames of the window", name)
             continue
         means[name] = mean
-        extra: dict[str, object] = {"drift_per_s": mean.slope, "drift_over_window": mean.drift}
+        per = "mps2" if unit == "m/s" else "mps"
+        extra: dict[str, object] = {f"drift_{per}": mean.slope, f"drift_over_window_{'mps' if unit == 'm/s' else 'm'}": mean.drift}
         out = replace(
             out, estimates={**out.estimates, name: Estimate(mean.value, unit, mean.u, mean.dof, window, words, extra)}
         )

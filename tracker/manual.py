@@ -3,7 +3,7 @@
 from pathlib import Path
 
 from tracker.defaults import DEFAULT_U, OUT_OF_PLANE_M
-from tracker.sheet import Bench, Sheet, bench_of, sections
+from tracker.sheet import Bench, bench_of, sections
 
 __all__ = ["manual"]
 

@@ -110,6 +110,8 @@ class LayerFit:
         Share of the outline's area whose pixels were in the picture and agreed.
     edge : float
         Share of the outline's edge that carried the fit.
+    cost : float
+        Mean robust loss of the patch's pixels, to compare fits of one patch.
     residual : (h, w) array
         Frame minus fit [grey levels].
     coverage : (h, w) array
@@ -124,6 +126,7 @@ class LayerFit:
     contrast: float
     cover: float
     edge: float
+    cost: float
     residual: Floats
     coverage: Floats
 
@@ -254,5 +257,6 @@ def _judge(patch: Patch, shape: Shape, p: Floats, look: Floats, shade: Floats, t
         misfit=float(1.4826 * np.median(np.abs(residual[inside]) / np.sqrt(variance[inside]))),
         contrast=contrast, cover=float((cover * agree).sum() / area),
         edge=float((slope * agree).sum() / max(float(slope.sum()), 1e-9)),
+        cost=float(np.average(np.log1p(residual**2 / (_OUTLIER * patch.sigma.ravel()) ** 2), weights=patch.trust.ravel())),
         residual=residual.reshape(patch.seen.shape), coverage=cover.reshape(patch.seen.shape),
     )  # fmt: skip

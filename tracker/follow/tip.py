@@ -28,6 +28,10 @@ _STEP_PX = 0.75  # the way during the exposure is laid in steps of at most this
 _LONG = 4.0  # how far back along the line the band is compared, in widths
 _LEAST_LONG_PX = 8.0
 _U_CUT = 0.1  # of the width: a square end, a round one and half a bead differ by about this
+_EXPLAINS = 0.5  # least share of the difference that a sure end explains
+_ENDS = 2.0  # how much worse, relatively, a line of another length must be
+_AHEAD = 0.08  # largest share of the pixels straight ahead that may look like the line
+_CONTRAST = 4.0  # least contrast [noise]
 _SQRT_2PI = np.sqrt(2.0 * np.pi)
 
 
@@ -43,11 +47,14 @@ class LineEnd:
         Its relative standard uncertainty: 0.3 when guessed, 0.03 when learned from frames before.
     soft_px : float
         Standard deviation of the blur across an edge, the pixel's own included [px].
+    pitch_px : float or None
+        Repeat length of its texture in the picture: beads and links are then light and dark along it [px].
     """
 
     width_px: float
     u_width: float = 0.3
     soft_px: float = 0.7
+    pitch_px: float | None = None
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -128,10 +135,10 @@ def tip_candidates(
     top = float(np.percentile(smooth[inside], 99.0)) if inside.any() else 0.0
     bright = float(np.sort(smooth[inside])[-max(1, int(width_px**2)) :].mean()) if inside.any() else 0.0
     level = max(floor, 0.4 * max(top, bright))
-    line = (smooth > level).astype(np.uint8)
-    gap = int(round(width_px)) | 1
-    line = cv2.morphologyEx(line, cv2.MORPH_CLOSE, cv2.getStructuringElement(cv2.MORPH_ELLIPSE, (gap, gap)))
-    return _ends(line, corner, away, width_px, reach_px, most)
+    gap = round(width_px) | 1
+    bridge = cv2.getStructuringElement(cv2.MORPH_ELLIPSE, (gap, gap))
+    line = cv2.morphologyEx((smooth > level).astype(np.uint8), cv2.MORPH_CLOSE, bridge)
+    return _ends(np.asarray(line, dtype=np.uint8), corner, away, width_px, reach_px, most)
 
 
 def _ends(line: NDArray[np.uint8], corner: tuple[int, int], away: NDArray[Any], width_px: float, reach_px: float,
@@ -184,6 +191,7 @@ class _Band:
     soft: float
     way: Floats
     params: Floats
+    pitch: float | None = None
 
     def cover(self, end_at: float = 0.0) -> tuple[Floats, Floats, Floats, Floats]:
         """Cover (n,), its derivatives (5, n) by the parameters, and places along and across (n,).
@@ -215,11 +223,20 @@ class _Band:
         return (wide * long).mean(axis=0), slopes, u.mean(axis=0), v.mean(axis=0)
 
     def lights(self, cover: Floats, u: Floats, v: Floats) -> Floats:
-        """Ways in which line and scene can be lit, as they are covered, (5, n)."""
+        """Ways in which line and scene can be lit, as they are covered, (k, n): scene, 1, line, across, along, texture."""
         half = self.params[4]
         across = np.clip(v / half, -1.0, 1.0)
         back = np.clip(-u / (2.0 * half), 0.0, _LONG)
-        return np.stack([cover, cover * across, cover * back, (1.0 - cover) * self.scene, 1.0 - cover])
+        rows = [(1.0 - cover) * self.scene, 1.0 - cover, cover, cover * across, cover * back]
+        if self.pitch is not None:
+            phase = (2 * np.pi / self.pitch) * u
+            rows += [cover * np.cos(phase), cover * np.sin(phase)]
+        return np.stack(rows)
+
+    def step(self, light: Floats, v: Floats) -> Floats:
+        """Line less scene (n,), texture and slope along it left out."""
+        across = np.clip(v / self.params[4], -1.0, 1.0)
+        return np.asarray(light[2] + light[3] * across - light[0] * self.scene - light[1])
 
 
 def _solved(rows: Floats, values: Floats, weight: Floats, precision: Floats | None = None,
@@ -233,7 +250,7 @@ def _solved(rows: Floats, values: Floats, weight: Floats, precision: Floats | No
     if precision is not None and pull is not None:
         flat += precision
         right = right + precision * pull
-    return np.linalg.solve(normal, right), normal
+    return np.asarray(np.linalg.solve(normal, right), dtype=float), normal
 
 
 def _scale(left: Floats, noise: float) -> float:
@@ -284,32 +301,32 @@ def fit_tip(
         return None
     sigma = np.array([np.inf, np.inf, np.inf, 0.1 / line.width_px, line.u_width * 0.5 * line.width_px])
     most = np.array([line.width_px, line.width_px, 0.4, 0.05, 0.2 * line.width_px])
-    weight, light, size = np.ones_like(band.seen), None, np.inf
-    scale, moved = noise, 0.0
+    weight, size = np.ones_like(band.seen), np.inf
+    light: Floats | None = None
+    scale = noise
     for step in range(steps):
         cover, slopes, u, v = band.cover()
         lights = band.lights(cover, u, v)
         if light is None:
-            for _ in range(2):
-                light = _solved(lights, band.seen, weight)[0]
-                left = band.seen - light @ lights
-                weight = np.maximum(1.0 - (left / (9.4 * _scale(left, noise))) ** 2, 0.0) ** 2
-        on_line = light[0] + light[1] * np.clip(v / band.params[4], -1, 1)
-        contrast = on_line - light[3] * band.scene - light[4]
-        rows = np.concatenate([lights, contrast * slopes])
-        precision = np.concatenate([np.zeros(5), (scale / sigma) ** 2])
-        pull = np.concatenate([np.zeros(5), expected - band.params])
-        solution, normal = _solved(rows, band.seen, weight, precision, pull)
+            light = _solved(lights, band.seen, weight)[0]
+            left = band.seen - light @ lights
+            weight = np.maximum(1.0 - (left / (9.4 * _scale(left, noise))) ** 2, 0.0) ** 2
+            light = _solved(lights, band.seen, weight)[0]
+        k = len(lights)
+        rows = np.concatenate([lights, band.step(light, v) * slopes])
+        precision = np.concatenate([np.zeros(k), (scale / sigma) ** 2])
+        pull = np.concatenate([np.zeros(k), expected - band.params])
+        solution = _solved(rows, band.seen, weight, precision, pull)[0]
         left = band.seen - solution @ rows
         scale = _scale(left, noise)
         weight = np.maximum(1.0 - (left / ((9.4 if step < 2 else 4.685) * scale)) ** 2, 0.0) ** 2
-        light, move = solution[:5], np.clip(solution[5:], -most, most)
+        light, move = solution[:k], np.clip(solution[k:], -most, most)
         if not np.isfinite(move).all():
             return None
         band.params = band.params + move
         band.params[4] = max(band.params[4], 0.25)
-        size, moved = float(np.hypot(*move[:2])), float(np.hypot(*(band.params[:2] - start)))
-        if moved > 3.0 * line.width_px + 3.0:
+        size = float(np.hypot(*move[:2]))
+        if float(np.hypot(*(band.params[:2] - start))) > 3.0 * line.width_px + 3.0:
             return None
         if step >= 3 and size < 0.01:
             break
@@ -328,7 +345,7 @@ def _near(seen: NDArray[Any], scene: NDArray[Any], corner: tuple[int, int], para
     width, blur = 2.0 * float(params[4]), 0.5 * float(np.hypot(*way))
     e = np.array([np.cos(params[2]), np.sin(params[2])])
     back = max(_LONG * width, _LEAST_LONG_PX) + blur
-    front, side = 1.5 * width + 4.0 + blur, 1.2 * width + 3.0 + blur
+    front, side = 1.5 * width + 4.0 + blur + (line.pitch_px or 0.0), 1.2 * width + 3.0 + blur
     far = back + side
     cx, cy = params[0] - corner[0], params[1] - corner[1]
     x0, x1 = max(0, int(cx - far)), min(w, int(np.ceil(cx + far)) + 1)
@@ -343,7 +360,7 @@ def _near(seen: NDArray[Any], scene: NDArray[Any], corner: tuple[int, int], para
         return None  # cut by the picture's border
     part = (slice(y0, y1), slice(x0, x1))
     return _Band(xx[take] + corner[0], yy[take] + corner[1], np.asarray(seen[part], float)[take],
-                 np.asarray(scene[part], float)[take], line.soft_px, way, np.array(params, dtype=float))
+                 np.asarray(scene[part], float)[take], line.soft_px, way, np.array(params, dtype=float), line.pitch_px)
 
 
 def _judged(band: _Band, weight: Floats, noise: float, ok: bool) -> TipFit:
@@ -359,25 +376,30 @@ def _judged(band: _Band, weight: Floats, noise: float, ok: bool) -> TipFit:
     for end_at in (1e6, -max(width, 2.0)):
         other = band.cover(end_at)[0]
         other_left = band.seen - light @ band.lights(other, np.minimum(u, 0.0), v)
-        tells = np.abs(other - cover) > 0.3
+        tells = np.abs(other - cover) > 0.3 * cover.max()  # a thin or much blurred line covers no pixel wholly
         tells &= u < 1.5 * width + 2.0
         if not tells.any():
             return TipFit(*_nothing(band))
         floor = noise**2 * tells.sum()
         ends = min(ends, float((other_left[tells] ** 2).sum()) / max(float((left[tells] ** 2).sum()), floor) - 1.0)
     beside = np.abs(u) < 2.0 * width + 2.0
-    bare = band.seen - light[3] * band.scene - light[4]
-    contrast = light[0] - light[3] * band.scene - light[4]
-    step = contrast + light[1] * np.clip(v / band.params[4], -1, 1)
-    design = np.concatenate([lights, step * slopes])
+    bare = band.seen - light[0] * band.scene - light[1]
+    contrast = band.step(light, v)
+    design = np.concatenate([lights, contrast * slopes])
     normal = _solved(design, band.seen, weight)[1]
     freedom = max(float(weight.sum()) - len(normal), 1.0)
-    cov = np.linalg.pinv(normal)[5:7, 5:7] * float((weight * left**2).sum()) / freedom
-    on_line = cover > 0.5
+    k = len(lights)
+    cov = np.asarray(np.linalg.pinv(normal)[k : k + 2, k : k + 2], dtype=float) * float((weight * left**2).sum()) / freedom
+    on_line = cover > 0.5 * cover.max()
+    mean = float(contrast[on_line].mean()) if on_line.any() else 0.0
+    # more of the same beyond the end, a bead past a gap say, and it is no end
+    ahead = (np.abs(v) < max(band.params[4], 1.0)) & (u > max(0.5 * width, 2.0 * band.soft) + 0.5 * float(np.hypot(*band.way)))
+    if not ahead.any() or float((left[ahead] * contrast[ahead] > 0.35 * mean**2).mean()) > _AHEAD:
+        ends = 0.0
     return TipFit(
         point=band.params[:2].copy(), cov=cov, bias_px=_U_CUT * width,
         direction=np.array([np.cos(band.params[2]), np.sin(band.params[2])]), bend=float(band.params[3]), width_px=width,
-        contrast=float(contrast[on_line].mean()) if on_line.any() else 0.0, rms=scale, ends=ends,
+        contrast=mean, rms=scale, ends=ends,
         explains=1.0 - float((left[beside] ** 2).sum()) / max(float((bare[beside] ** 2).sum()), 1e-9),
         ok=ok and bool(np.isfinite(cov).all()),
     )  # fmt: skip
@@ -443,7 +465,7 @@ def find_tip(
 
 def _sure(fit: TipFit, line: LineEnd, noise: float, contrast: float | None) -> bool:
     """Whether this is an end, of this line, as far as the picture can say."""
-    if not fit.ok or fit.explains < 0.6 or fit.ends < 2.0 or abs(fit.contrast) < 4.0 * noise:
+    if not fit.ok or fit.explains < _EXPLAINS or fit.ends < _ENDS or abs(fit.contrast) < _CONTRAST * noise:
         return False
     if not 1 - 3 * line.u_width < fit.width_px / line.width_px < 1 + 3 * line.u_width:
         return False

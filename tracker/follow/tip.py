@@ -28,7 +28,7 @@ _STEP_PX = 0.75  # the way during the exposure is laid in steps of at most this
 _LONG = 4.0  # how far back along the line the band is compared, in widths
 _LEAST_LONG_PX = 8.0
 _U_CUT = 0.1  # of the width: a square end, a round one and half a bead differ by about this
-_EXPLAINS = 0.5  # least share of the difference that a sure end explains
+_EXPLAINS = 0.7  # least share of the difference that a sure end explains
 _ENDS = 2.0  # how much worse, relatively, a line of another length must be
 _AHEAD = 0.08  # largest share of the pixels straight ahead that may look like the line
 _CONTRAST = 4.0  # least contrast [noise]
@@ -440,7 +440,7 @@ def find_tip(
     reach_px : float
         How far from `near` it may be.
     contrast : float, optional
-        Line less scene in frames before: an end much fainter than that is a shadow's, and is left.
+        Line less scene in frames before: an end much fainter is a shadow's, one of another sign another thing's.
 
     Returns
     -------
@@ -471,4 +471,4 @@ def _sure(fit: TipFit, line: LineEnd, noise: float, contrast: float | None) -> b
         return False
     if float(np.sqrt(np.trace(fit.cov))) > 1.0:
         return False
-    return contrast is None or fit.contrast / contrast > 0.5
+    return contrast is None or 0.5 < fit.contrast / contrast < 2.0

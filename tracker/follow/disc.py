@@ -14,7 +14,7 @@ from scipy.special import ndtr
 
 from tracker.follow.layer import Drawn
 
-__all__ = ["BLUR", "RADIUS", "SOFT", "Disc", "disc_looks", "roundness"]
+__all__ = ["BLUR", "RADIUS", "SOFT", "Disc", "disc_looks", "look_spread", "roundness"]
 
 Floats = NDArray[np.float64]
 
@@ -26,6 +26,7 @@ BLUR = slice(4, 6)
 
 _STEP = 1.5  # how far apart the moments may lie of which an exposure is made up [px]
 _MOST_STEPS = 24
+_SLOPE, _BEND = 0.3, 0.15
 _LIMB = 0.25  # the shading's slope is unbounded where a ball's surface turns away; it is cut off here
 
 
@@ -61,6 +62,18 @@ def roundness(velocity: Floats, time_slope: Floats, from_middle: Floats, focal_p
     ray = from_middle / rho
     cosine = focal_px / np.hypot(focal_px, rho)
     return np.asarray((np.eye(2) - (1.0 - cosine) * np.outer(ray, ray)) @ still)
+
+
+def look_spread(looks: int, level: float) -> Floats:
+    """Covariance of the functions' weights (looks, looks) that lamps make likely, for a look of about this grey level.
+
+    A lamp alone from one side would give 0.5 of its light to the slopes and 0.3 to the curvatures (the Legendre
+    series of the cosine cut off at zero: 1/4, 1/2, 5/16), but rooms are never without other light. A limit is needed: a
+    limb that may be as dark as the wall lets the outline slip.
+    """
+    sigma = np.array([1.0, _SLOPE, _SLOPE, _SLOPE, _BEND, _BEND, _BEND, _BEND, _BEND])[:looks] * max(level, 1.0)
+    sigma[0] = 200.0  # any grey level
+    return np.asarray(np.diag(sigma**2))
 
 
 @dataclass(frozen=True, slots=True, eq=False)

@@ -9,7 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from tracker.follow.background import Background, Region
-from tracker.follow.disc import BLUR, RADIUS, SOFT, Disc, disc_looks, roundness
+from tracker.follow.disc import BLUR, RADIUS, SOFT, Disc, disc_looks, look_spread, roundness
 from tracker.follow.layer import Belief, LayerFit, Patch, fit_layer
 from tracker.follow.tip import LineEnd, find_tip
 
@@ -21,6 +21,9 @@ U_RADIUS = 0.007  # relative: a caliper on the mark, the board's scale at the ma
 U_ORIGIN_PX = 1.5  # a technician's click
 _SOFT, _U_SOFT = 0.6, 0.25  # blur of an edge by lens and pixel [px]
 _GRID = 40  # the light of a frame is read off about so many columns and rows
+_SURE_PX = 1.2  # a place foretold closer than this is a good enough start
+_PLAIN_EDGE, _PLAIN_MISFIT = 0.6, 1.8  # of a fit that is plainly right
+_USUAL = 0.1  # weight of it in each frame
 _SEEK_MOST = 5  # candidates looked at closely
 
 
@@ -151,7 +154,7 @@ class DiscEye:
         core = patch.seen[away < 0.6 * self.radius]
         look = np.zeros(self._looks)
         look[0] = float(np.median(core))
-        spread = 60.0**2 * np.eye(self._looks)
+        spread = look_spread(self._looks, float(look[0]))
         best, cost = None, np.inf
         for start in _starts(near, min(reach, 0.5 * self.radius + 1)):
             p = np.array([*start, self.radius, _SOFT, 0.0, 0.0])
@@ -167,39 +170,46 @@ class DiscEye:
     def near(self, view: View, place: Floats, velocity: Floats, gate_px: float, way_s: float) -> Sight | None:
         """The mark close to where it is expected."""
         assert self.belief is not None
-        gate = min(gate_px, 0.6 * self.radius + 1.0)
         way = velocity * way_s
-        patch = self._patch(view, place, 1.08 * self.radius + 4 + gate + 0.5 * float(np.hypot(*way)))
+        starts = [place]
+        if gate_px > _SURE_PX:  # not foretold closely enough to begin there
+            starts = self._candidates(view, place, min(gate_px, 3 * self.size_px), way)[:2] or starts
+        best: tuple[LayerFit, Patch] | None = None
+        for start in starts:
+            found = self._settle(view, start, velocity, way, min(gate_px, _SURE_PX))
+            if found is not None and (best is None or found[0].explained > best[0].explained):
+                best = found
+        if best is None or float(np.hypot(*(best[0].p[:2] - place))) > max(3 * gate_px, self.radius):
+            return None
+        return self._sight(best[0], view, best[1], velocity)
+
+    def _settle(self, view: View, start: Floats, velocity: Floats, way: Floats, gate: float) -> tuple[LayerFit, Patch] | None:
+        """The best fit from one start, and its patch; from all around it, where the first try is not plainly right."""
+        patch = self._patch(view, start, 1.08 * self.radius + 4 + gate + 0.5 * float(np.hypot(*way)))
         if patch is None:
             return None
-        disc, belief = self._disc(view, place, velocity), self._expected(view, place, way, gate)
-        fit = fit_layer(patch, disc, belief, soften=(min(0.5 * gate, 2.0), 0.0, 0.0), reach=2 * gate + 1)
-        if fit is None or not self._good(fit, patch, belief) or fit.edge < 0.7:
-            for soften in ((2.0, 1.0, 0.5, 0.0, 0.0), (0.7, 0.3, 0.0, 0.0)):
-                other = fit_layer(patch, disc, belief, soften=soften, reach=2 * gate + 1)
+        disc, belief = self._disc(view, start, velocity), self._expected(view, start, way, gate)
+        reach = 0.5 * self.radius + 2 + gate
+        fit = fit_layer(patch, disc, belief, soften=(0.4, 0.0, 0.0), reach=reach)
+        if fit is None or not self._good(fit, patch, belief) or fit.edge < _PLAIN_EDGE or fit.misfit > _PLAIN_MISFIT:
+            for other_start in _starts(start if fit is None else fit.p[:2], min(0.6 * self.radius, 4.0)):
+                p = belief.p.copy()
+                p[:2] = other_start
+                other = fit_layer(patch, disc, replace(belief, p=p), soften=(0.7, 0.3, 0.0, 0.0, 0.0), reach=reach)
                 if other is not None and (fit is None or other.cost < fit.cost):
                     fit = other
-        if fit is None or not self._good(fit, patch, belief):
-            return None
-        return self._sight(fit, view, patch, velocity)
+        return None if fit is None or not self._good(fit, patch, belief) else (fit, patch)
 
     def seek(self, view: View, place: Floats, last: Floats, since_s: float, reach_px: float, way_s: float) -> list[Sight]:
         """All that look like the mark within reach, best first."""
         assert self.belief is not None
         found: list[Sight] = []
-        for start in self._candidates(view, place, reach_px):
+        for start in self._candidates(view, place, reach_px, np.zeros(2)):
             velocity = (start - last) / max(since_s, 1e-6)
             way = velocity * way_s
-            patch = self._patch(view, start, 1.08 * self.radius + 6 + 0.5 * float(np.hypot(*way)))
-            if patch is None:
-                continue
-            belief = self._expected(view, start, way, float(np.hypot(*way)) + 2.0)
-            disc = self._disc(view, start, velocity)
-            fits = [fit_layer(patch, disc, belief, soften=soften, reach=self.radius + 2)
-                    for soften in ((2.0, 1.0, 0.5, 0.0, 0.0, 0.0), (0.7, 0.3, 0.0, 0.0))]  # fmt: skip
-            good = [fit for fit in fits if fit is not None and self._good(fit, patch, belief)]
-            if good:
-                found.append(self._sight(min(good, key=lambda fit: fit.cost), view, patch, velocity))
+            one = self._settle(view, start, velocity, way, float(np.hypot(*way)) + 2.0)
+            if one is not None:
+                found.append(self._sight(one[0], view, one[1], velocity))
         found.sort(key=lambda sight: -sight.quality)
         apart: list[Sight] = []
         for sight in found:
@@ -213,7 +223,14 @@ class DiscEye:
         jitter = (0.02 * fit.contrast + 0.5) ** 2 * np.eye(self._looks) + 0.02**2 * np.outer(fit.look, fit.look)
         p = fit.p.copy()
         p[RADIUS] = self.radius
-        self.belief = Belief(p, fit.p, fit.look / view.gain, fit.look_cov / view.gain**2 + jitter)
+        look, cov = fit.look / view.gain, fit.look_cov / view.gain**2 + jitter
+        if self.belief is not None:  # what lamps make likely is said again: jitter would forget it
+            usual = np.linalg.inv(look_spread(self._looks, float(look[0])))
+            usual[0, 0] = 0.0
+            precision = np.linalg.inv(cov)
+            cov = np.linalg.inv(precision + _USUAL * usual)
+            look = cov @ (precision @ look)
+        self.belief = Belief(p, fit.p, look, cov)
         if self.burnt is not None and self.burnt.any():
             self._uncover(view, sight)
 
@@ -293,7 +310,7 @@ class DiscEye:
             return moved
         simple = min(self._looks, 4)
         disc = self._disc(view, centre, velocity)
-        told = Belief(belief.p, belief.p_sigma, belief.look[:simple], 60.0**2 * np.eye(simple))
+        told = Belief(belief.p, belief.p_sigma, belief.look[:simple], look_spread(simple, float(belief.look[0])))
         larger = belief.p.copy()
         larger[RADIUS] *= 1 + self.u_size
         sigma = belief.p_sigma.copy()
@@ -308,37 +325,39 @@ class DiscEye:
 
     # --- searching ----------------------------------------------------------------------------------------------
 
-    def _candidates(self, view: View, place: Floats, reach: float) -> list[Floats]:
+    def _candidates(self, view: View, place: Floats, reach: float, way: Floats) -> list[Floats]:
         """Places where the mark explains the picture better than the bare scene does, best first.
 
-        The difference of the two sums of squares over the mark's core, for every place at once, by correlation.
+        The difference of the two sums of squares, for every place at once, by correlation: around the mark the scene
+        is taken as level, under it as what it is.
         """
         assert self.belief is not None
-        core = max(0.75 * self.radius, 1.0)
-        k = int(np.ceil(core))
+        k = int(np.ceil(self.radius + 1.5 + 0.5 * float(np.hypot(*way))))
         region = _region(place, reach + k, view.gray.shape)
         if region is None:
             return []
         x0, y0, x1, y1 = region
-        seen = view.gray[y0:y1, x0:x1].astype(np.float32)
         scene = self.background.expected(view.gray.shape, region, view.motion) * np.float32(view.gain)
+        left = view.gray[y0:y1, x0:x1] - scene
         v, u = np.mgrid[-k : k + 1, -k : k + 1].astype(float)
-        disc = Disc(self._looks, np.eye(2))
-        p = np.array([0.0, 0.0, self.radius, 0.5, 0.0, 0.0])
-        face = disc.draw(p, u.ravel(), v.ravel(), self.belief.look).basis
-        look = (self.belief.look @ face).reshape(u.shape) * view.gain
-        mask = (np.hypot(u, v) <= core).astype(np.float32)
-        mask /= mask.sum()
-        drawn = (look * mask).astype(np.float32)
-        # mean over the core of (seen - scene)^2 - (seen - look)^2, and of (seen - look)^2
-        square = cv2.filter2D(seen * seen, cv2.CV_32F, mask, borderType=cv2.BORDER_REFLECT)
-        with_mark = square - 2 * cv2.filter2D(seen, cv2.CV_32F, drawn, borderType=cv2.BORDER_REFLECT) + float((look**2 * mask).sum())
-        bare = cv2.filter2D((seen - scene) ** 2, cv2.CV_32F, mask, borderType=cv2.BORDER_REFLECT)
-        gain = np.where(with_mark < 0.6 * bare, bare - with_mark, 0.0)
+        drawn = Disc(self._looks, np.eye(2)).draw(
+            np.array([0.0, 0.0, self.radius, 0.6, *way]), u.ravel(), v.ravel(), self.belief.look
+        )
+        cover = drawn.basis[0].reshape(u.shape).astype(np.float32)
+        colour = (self.belief.look @ drawn.basis).reshape(u.shape).astype(np.float32) * np.float32(view.gain)
+        # (left)^2 - (left + cover scene - colour)^2, summed, the scene being level over the mark
+        level = cv2.filter2D(scene, cv2.CV_32F, cover / cover.sum(), borderType=cv2.BORDER_REFLECT)
+        on_cover = cv2.filter2D(left, cv2.CV_32F, cover, borderType=cv2.BORDER_REFLECT)
+        on_colour = cv2.filter2D(left, cv2.CV_32F, colour, borderType=cv2.BORDER_REFLECT)
+        square = float((cover**2).sum()) * level**2 - 2 * float((cover * colour).sum()) * level + float((colour**2).sum())
+        gain = 2 * on_colour - 2 * level * on_cover - square
+        gain[gain < 0.3 * square] = 0.0
+        y, x = np.mgrid[y0:y1, x0:x1]
+        gain[np.hypot(x - place[0], y - place[1]) > reach + 1] = 0.0
         found: list[Floats] = []
         while len(found) < _SEEK_MOST:
             row, column = np.unravel_index(int(np.argmax(gain)), gain.shape)
-            if gain[row, column] <= 9 * self.background.noise**2 / max(mask.astype(bool).sum(), 1):
+            if gain[row, column] <= 25 * self.background.noise**2:
                 break
             found.append(np.array([x0 + column, y0 + row], dtype=float))
             n = int(np.ceil(self.radius))

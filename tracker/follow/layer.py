@@ -22,11 +22,14 @@ __all__ = ["Belief", "Drawn", "LayerFit", "Patch", "Shape", "fit_layer"]
 
 Floats = NDArray[np.float64]
 
+_SETTLED_PX = 0.01
 _OUTLIER = 3.0  # residuals, in their sigma, from which a pixel counts less
 _MODEL_SHARE = 0.03  # of the contrast: what smooth looks leave unexplained, however quiet the sensor
 _EDGE_SHARE = 0.10  # and of the edge's steepness: how pictures are sharpened and compressed is not known
 _EARLY_SHARE = 0.30
 _FOREIGN_SHARE = 0.25  # of the contrast, outside the outline: something else is there
+_DISC5 = np.asarray(cv2.getStructuringElement(cv2.MORPH_ELLIPSE, (5, 5)))
+_DISC7 = np.asarray(cv2.getStructuringElement(cv2.MORPH_ELLIPSE, (7, 7)))
 _SCENE_SIGMA = 0.05  # by how much shadows may dim the scene behind, and how unevenly
 
 
@@ -170,7 +173,7 @@ def fit_layer(
     prior[n_p + n_l :, n_p + n_l :] = np.eye(3) / _SCENE_SIGMA**2
     solved = np.zeros(n)
     shade = np.zeros(3)
-    for step, extra in enumerate(soften):
+    for extra in soften:
         q = p.copy()
         q[blur_at] = np.hypot(q[blur_at], extra)
         drawn = shape.draw(q, x, y, look)
@@ -199,6 +202,8 @@ def fit_layer(
         look, shade = solved[n_p : n_p + n_l], solved[n_p + n_l :]
         if not np.isfinite(p).all() or float(np.hypot(*(p[:2] - belief.p[:2]))) > reach:
             return None
+        if extra == 0.0 and float(np.abs(move[:2]).max()) < _SETTLED_PX:
+            break
     return _judge(patch, shape, p, look, shade, tilt, prior)
 
 
@@ -215,11 +220,12 @@ def _contrast(basis: Floats, look: Floats, scene: Floats, cover: Floats) -> floa
 
 def _foreign(residual: Floats, cover: Floats, variance: Floats, contrast: float, shape: tuple[int, ...]) -> NDArray[np.bool_]:
     """Pixels outside the outline that show something else (the line, a clamp), and their neighbours."""
-    outside = cv2.dilate((cover > 0.02).reshape(shape).astype(np.uint8), np.ones((3, 3), np.uint8)).ravel() == 0
+    near = cv2.dilate((cover > 0.02).reshape(shape).astype(np.uint8), _DISC5)  # its own edge, not quite in place yet
+    outside = near.ravel() == 0
     odd = outside & (np.abs(residual) > np.maximum(4 * np.sqrt(variance), _FOREIGN_SHARE * contrast))
     if not odd.any():
         return odd
-    grown = cv2.dilate(odd.reshape(shape).astype(np.uint8), np.ones((5, 5), np.uint8))
+    grown = cv2.dilate(odd.reshape(shape).astype(np.uint8), _DISC7)
     return np.asarray(grown.ravel().astype(bool))
 
 

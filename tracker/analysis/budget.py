@@ -1,9 +1,10 @@
 """From estimates and what each cause does to them to quantities with their budgets.
 
 Each cause was pushed through the whole analysis at plus and minus one standard uncertainty; half the difference is its
-part of each quantity (JCGM 100:2008, 5.1.3, note 2). Causes that bear one name and one identity are one line.
+part of each quantity (JCGM 100:2008, 5.1.3, note 2). Causes that bear one name are one line.
 """
 
+import hashlib
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 
@@ -44,10 +45,10 @@ def make_quantities(estimates: Mapping[str, Estimate], causes: Sequence[Pushed])
     """
     made = {}
     for name, estimate in estimates.items():
-        merged: dict[tuple[str, str, str], list[tuple[Pushed, float]]] = {}
+        merged: dict[tuple[str, str], list[tuple[Pushed, float]]] = {}
         for cause in causes:
             part = _part(estimate.value, cause.plus.get(name, np.nan), cause.minus.get(name, np.nan))
-            merged.setdefault((cause.label, cause.shared, cause.id), []).append((cause, part))
+            merged.setdefault((cause.label, cause.shared), []).append((cause, part))
         lines = [_line(group) for group in merged.values()]
         if estimate.u_random > 0:
             lines.append(
@@ -84,7 +85,9 @@ def _line(group: Sequence[tuple[Pushed, float]]) -> BudgetLine:
     if len(group) == 1:
         return BudgetLine(cause.label, cause.u, part / cause.u, "B", cause.dof, cause.shared, cause.id, cause.unit)
     together = float(np.sqrt(sum(p**2 for _, p in group)))
-    return BudgetLine(cause.label, 1.0, together, "B", cause.dof, cause.shared, cause.id, "1")
+    ids = sorted({one.id for one, _ in group})
+    identity = ids[0] if len(ids) == 1 else hashlib.sha256(" ".join(ids).encode()).hexdigest()[:12]
+    return BudgetLine(cause.label, 1.0, together, "B", cause.dof, cause.shared, identity, "1")
 
 
 _ADVICE = {

@@ -43,7 +43,12 @@ def accelerations(
         reason = f"only {within(track, window_s).size} frames measured from {window_s[0]:.3f} to {window_s[1]:.3f} s"
         return with_reason(evaluation, reason, *names), None
     words = "constant acceleration that best fits z(t) over the window, start place and start speed left free"
-    window = (float(fit.t_s[0]), float(fit.t_s[-1]))
+    # the window is stated to the middle between frames, so that it does not hang on the last digit of a time which it holds
+    half = 0.5 * float(np.median(np.diff(fit.t_s)))
+    window = (
+        min(max(window_s[0], float(fit.t_s[0]) - half), float(fit.t_s[0]) - 0.1 * half),
+        max(min(window_s[1], float(fit.t_s[-1]) + half), float(fit.t_s[-1]) + 0.1 * half),
+    )
     more = {**extra, "fit_rms_m": fit.rms_m, "frames": int(fit.t_s.size)}
     found = {
         names[0]: Estimate(fit.a, "m/s2", fit.u_a, fit.dof, window, words, more),

@@ -61,7 +61,7 @@ def measure_end(stage: Stage, tell: Progress) -> Outcome:
     total = stage.end_frame - stage.first_frame
     frames = stage.clip.frames(stage.first_frame, stage.end_frame)
     follow = follow_end(
-        frames, stage.background, stage.clock, stage.hints, shake=stage.shake,
+        frames, stage.background, stage.plane, stage.clock, stage.hints, shake=stage.shake,
         progress=lambda index: tell("following the end", index - stage.first_frame + 1, total),
     )  # fmt: skip
     _refuse_unseen(stage, follow)
@@ -153,7 +153,7 @@ def _track(follow: EndFollow, view: View, fixed: _Fixed | None) -> Track:
         phase = np.clip(phase, -1.0, 1.0)
     metres = view.plane.to_metres(view.nudge.applied(follow.px, phase))
     times = view.clock.at(follow.frame, follow.raw_px)
-    return Track(times, metres[:, 0], metres[:, 1], follow.u_px / view.plane.scale_px_per_m())
+    return Track(times, metres[:, 0], metres[:, 1], follow.u_xy_px[:, 1] / view.plane.scale_px_per_m())
 
 
 def _fixed(track: Track, best: Evaluation) -> _Fixed:

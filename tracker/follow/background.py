@@ -257,8 +257,9 @@ def _fit_light(
     if good.sum() < 50:
         return Light(1.0, 0.0)
     gain, offset = _robust_line(b[good], s[good], noise)
-    left = (s - (gain * b + offset)) / np.maximum(gain * b, 8.0)
-    left[~good] = np.nan
+    off = s - (gain * b + offset)
+    left = off / np.maximum(gain * b, 8.0)
+    left[~good | ~_close(off, noise)] = np.nan  # a line that hangs along a column is no profile of the light
     by_row = _profile(left, 1, rows, shape[0], noise / max(float(np.median(b[good])), 8.0))
     if by_row is not None:
         left = left - np.interp(rows, np.arange(shape[0]), by_row)[:, None]
@@ -269,9 +270,9 @@ def _fit_light(
 def _robust_line(x: NDArray[np.float64], y: NDArray[np.float64], noise: float) -> tuple[float, float]:
     """y = gain x + offset by iteratively trimmed least squares; a flat scene carries no gain, so gain is held near
     the ratio of the medians with a weight that any real contrast overrules."""
-    keep = np.ones(x.shape, dtype=bool)
-    gain, offset = 1.0, 0.0
-    for _ in range(4):
+    gain, offset = float(np.median(y)) / max(float(np.median(x)), 1.0), 0.0
+    keep = _close(y - gain * x, noise)  # from the start: on a flat wall the line alone has contrast, and would lead the fit
+    for _ in range(3):
         xs, ys = x[keep], y[keep]
         mx, my = float(np.median(xs)), float(np.median(ys))
         ratio = my / max(mx, 1.0)
@@ -279,9 +280,13 @@ def _robust_line(x: NDArray[np.float64], y: NDArray[np.float64], noise: float) -
         dx, dy = xs - mx, ys - my
         gain = float((dx @ dy + held * ratio) / (dx @ dx + held))
         offset = my - gain * mx
-        left = np.abs(y - gain * x - offset)
-        keep = left < max(3.0 * _MAD_TO_SIGMA * float(np.median(left)), 3.0 * noise, 1.0)
+        keep = _close(y - gain * x - offset, noise)
     return gain, offset
+
+
+def _close(left: NDArray[np.float64], noise: float) -> NDArray[np.bool_]:
+    size = np.abs(left)
+    return np.asarray(size <= max(3.0 * _MAD_TO_SIGMA * float(np.median(size)), 3.0 * noise, 1.0))
 
 
 def _profile(

@@ -261,6 +261,7 @@ class _Fit:
         self.rows, self.joined, self.spacing_m = rows, joined, spacing_m
         self.marks = int(rows.track.max()) + 1
         self.stretch = self.u_stretch = self.ratio = self.u_ratio = float("nan")
+        self.foretold = 0.0
 
     def basis(self, t: Floats, order: int = 0) -> Floats:
         inside = np.clip(t, self.start, self.end)
@@ -289,7 +290,7 @@ class _Fit:
         inverse = cho_solve(normal, np.eye(x.shape[1]))
         dof = max(y.size - float(np.trace(inverse @ (x.T @ (weight[:, None] * x)))), 1.0)
         variance = float((left**2 * weight * u**2).sum()) / dof
-        self.cov = inverse * max(variance, 1e-6) * _inflation(left, group)
+        self.cov = inverse * max(variance, self.foretold, 1e-6)
         last = self.size + self.marks
         if self.spacing_m is not None:
             self.ratio, self.u_ratio = float(answer[last]), float(np.sqrt(self.cov[last, last]))
@@ -358,9 +359,12 @@ class _Fit:
 
         The heaviest is taken that does no worse than the best by more than one standard error of the difference
         between the stretches: the score is flat on the side of too little smoothing (the usual rule for choosing a
-        model by cross-validation, Hastie, Tibshirani, Friedman, The Elements of Statistical Learning, 7.10).
+        model by cross-validation, Hastie, Tibshirani, Friedman, The Elements of Statistical Learning, 7.10). How much
+        the left-out stretches' means are off, over what independent errors would make of them, goes into the u: sights in
+        one frame share the error of the rim's crossing, neighbouring frames that of their shape.
         """
         scores = np.zeros((_POWERS.size, int(group.max()) + 1))
+        expected = np.ones_like(scores)
         fold = group % _FOLDS
         grams = [self._gram(x[fold == k], y[fold == k], weight[fold == k]) for k in range(_FOLDS)]
         whole = (sum(g[0] for g in grams), sum(g[1] for g in grams))
@@ -368,16 +372,25 @@ class _Fit:
             out = fold == k
             if not out.any() or out.all():
                 continue
-            count = np.maximum(np.bincount(group[out], weight[out]), 1e-300)
+            number, member = np.unique(group[out], return_inverse=True)
+            count = np.bincount(member, weight[out])
+            mean_x = np.zeros((number.size, x.shape[1]))
+            np.add.at(mean_x, member, weight[out, None] * x[out])
+            mean_x /= count[:, None]
+            mean_y = np.bincount(member, weight[out] * y[out]) / count
             rest = (whole[0] - grams[k][0], whole[1] - grams[k][1])
             for i, power in enumerate(_POWERS):
-                answer, _ = self._solved(*rest, 10.0**power * penalty, held_x, held_y, held_u)
-                left = weight[out] * (y[out] - x[out] @ answer)
-                scores[i, : count.size] += np.bincount(group[out], left) ** 2 / count
+                answer, factor = self._solved(*rest, 10.0**power * penalty, held_x, held_y, held_u)
+                scores[i, number] = count * (mean_y - mean_x @ answer) ** 2
+                expected[i, number] = 1.0 + count * (mean_x * cho_solve(factor, mean_x.T).T).sum(axis=1)
         best = int(np.argmin(scores.sum(axis=1)))
         worse = scores - scores[best]
         error = worse.std(axis=1) * np.sqrt(worse.shape[1])
-        return float(_POWERS[np.nonzero(worse.sum(axis=1) <= error)[0].max(initial=best)])
+        chosen = int(np.nonzero(worse.sum(axis=1) <= error)[0].max(initial=best))
+        told = scores[chosen] > 0
+        if told.any():
+            self.foretold = float(np.mean(scores[chosen][told] / expected[chosen][told]))
+        return float(_POWERS[chosen])
 
     @staticmethod
     def _gram(x: Floats, y: Floats, weight: Floats) -> tuple[Floats, Floats]:
@@ -431,20 +444,6 @@ def _rough_paid_out(rows: _Rows):  # type: ignore[no-untyped-def]
     mean = np.interp(np.arange(count.size), np.nonzero(have)[0], speed[have] / count[have]) if have.any() else speed
     total = np.concatenate([[0.0], np.cumsum(mean)])
     return lambda t: np.interp(t, grid, total)
-
-
-def _inflation(left: Floats, group: NDArray[np.intp]) -> float:
-    """Variance of sums over stretches of frames over what independent residuals would give, at least 1.
-
-    Sights in one frame share the error of the rim's crossing, and neighbouring frames share their shape's: a
-    plain least-squares u is then too small.
-    """
-    count = np.bincount(group).astype(float)
-    total = np.bincount(group, np.clip(left, -6, 6))
-    used = count >= 2
-    if used.sum() < 4:
-        return 2.0
-    return float(max((total[used] ** 2).sum() / (np.clip(left, -6, 6) ** 2 * used[group]).sum(), 1.0))
 
 
 # texture alone ------------------------------------------------------------------------------------------------------

@@ -26,6 +26,7 @@ BLUR = slice(4, 6)
 
 _STEP = 1.5  # how far apart the moments may lie of which an exposure is made up [px]
 _MOST_STEPS = 24
+_SHORT = 0.5  # of the radius: a way over which the look changes little
 _SLOPE, _BEND = 0.3, 0.15
 _LIMB = 0.25  # the shading's slope is unbounded where a ball's surface turns away; it is cut off here
 
@@ -96,52 +97,76 @@ class Disc:
         """Coverage, look and their derivatives on pixels (n,); see `layer.Shape`."""
         radius, soft = float(p[RADIUS]), float(p[SOFT])
         way = p[BLUR]
-        moments = int(np.clip(np.ceil(np.hypot(*way) / _STEP), 1, _MOST_STEPS))
-        soft = float(np.hypot(soft, np.hypot(*way) / moments / np.sqrt(12)))  # the way between two moments
+        length = float(np.hypot(*way))
+        moments = int(np.clip(np.ceil(length / _STEP), 1, _MOST_STEPS))
+        soft = float(np.hypot(soft, length / moments / np.sqrt(12)))  # the way between two moments
+        shares = (np.arange(moments) + 0.5) / moments - 0.5
+        m = self.round_again
+        u0, v0 = x - p[0], y - p[1]
+        u, v = m[0, 0] * u0 + m[0, 1] * v0, m[1, 0] * u0 + m[1, 1] * v0
+        if length < _SHORT * radius:  # the look is smooth: that of mid-exposure will do
+            return self._blurred_outline(u, v, radius, soft, way, shares, look)
         basis = np.zeros((self.looks, x.size))
         d_cover, d_colour = np.zeros((6, x.size)), np.zeros((6, x.size))
-        for share in (np.arange(moments) + 0.5) / moments - 0.5:
-            u, v = x - p[0] - share * way[0], y - p[1] - share * way[1]
-            m = self.round_again
-            self._add(m[0, 0] * u + m[0, 1] * v, m[1, 0] * u + m[1, 1] * v, radius, soft, float(share), look, basis, d_cover, d_colour)
-        return Drawn(basis / moments, d_cover / moments, d_colour / moments)
+        for share in shares:
+            one = self._blurred_outline(u - share * way[0], v - share * way[1], radius, soft, way, np.zeros(1), look)
+            basis += one.basis / moments
+            for total, part in ((d_cover, one.d_cover), (d_colour, one.d_colour)):
+                total[:4] += part[:4] / moments
+                total[4:] += share * part[:2] / moments
+        return Drawn(basis, d_cover, d_colour)
 
-    def _add(
-        self, u: Floats, v: Floats, radius: float, soft: float, share: float, look: Floats,
-        basis: Floats, d_cover: Floats, d_colour: Floats,
-    ) -> None:  # fmt: skip
-        """Add one moment of the exposure."""
-        rho = np.sqrt(u * u + v * v) + 1e-12
-        inside = (radius - rho) / soft
-        cover = ndtr(inside)
-        slope = np.exp(-0.5 * inside * inside) * (0.3989422804014327 / soft)
-        functions, d_look_x, d_look_y = _look(u, v, rho, radius, look)
-        basis += cover * functions
-        colour = look @ functions
-        moves = np.stack([slope * u / rho, slope * v / rho, slope, -slope * inside])
-        paints = moves * colour
+    def _blurred_outline(
+        self, u: Floats, v: Floats, radius: float, soft: float, way: Floats, shares: Floats, look: Floats
+    ) -> Drawn:
+        """A disc whose look stands still while its outline goes its way."""
+        moves = np.zeros((6, u.size))
+        cover = np.zeros(u.size)
+        rho0 = np.sqrt(u * u + v * v) + 1e-12
+        for share in shares:
+            a, b, rho = u, v, rho0
+            if share != 0.0:
+                a, b = u - share * way[0], v - share * way[1]
+                rho = np.sqrt(a * a + b * b) + 1e-12
+            inside = (radius - rho) / soft
+            slope = np.exp(-0.5 * inside * inside) * (0.3989422804014327 / soft)
+            across = slope / rho
+            cover += ndtr(inside)
+            moves[0] += across * a
+            moves[1] += across * b
+            moves[2] += slope
+            moves[3] -= slope * inside
+            moves[4] += share * across * a
+            moves[5] += share * across * b
+        if shares.size > 1:
+            cover, moves = cover / shares.size, moves / shares.size
+        functions, d_look_x, d_look_y = _look(u, v, rho0, radius, look)
+        paints = moves * (look @ functions)
         paints[0] -= cover * d_look_x
         paints[1] -= cover * d_look_y
-        d_cover[:4] += moves
-        d_colour[:4] += paints
-        d_cover[4:] += share * moves[:2]
-        d_colour[4:] += share * paints[:2]
+        return Drawn(cover * functions, moves, paints)
 
 
 def _look(u: Floats, v: Floats, rho: Floats, radius: float, look: Floats) -> tuple[Floats, Floats, Floats]:
     """The functions of the look (looks, n), and the look's slopes along columns and rows."""
-    one = np.ones_like(u)
+    functions = np.ones((look.size, u.size))
     if look.size == 1:
-        return one[None], np.zeros_like(u), np.zeros_like(u)
+        return functions, np.zeros_like(u), np.zeros_like(u)
     out = np.maximum(rho, radius)
-    a, b = u / out, v / out
-    c = np.sqrt(np.maximum(1.0 - a * a - b * b, 0.0))
+    a, b = np.divide(u, out, out=functions[1]), np.divide(v, out, out=functions[2])
+    aa, bb = a * a, b * b
+    c = np.sqrt(np.maximum(1.0 - aa - bb, 0.0), out=functions[3])
     within = (rho < radius) / radius
     fall = 1.0 / np.maximum(c, _LIMB)
     if look.size == 4:
-        through = look[3]
-        return np.stack([one, a, b, c]), within * (look[1] - through * a * fall), within * (look[2] - through * b * fall)
-    through = look[3] + look[5] * a + look[6] * b + 2 * look[8] * c
-    d_x = within * (look[1] + look[4] * b + look[5] * c + 2 * look[7] * a - through * a * fall)
-    d_y = within * (look[2] + look[4] * a + look[6] * c - 2 * look[7] * b - through * b * fall)
-    return np.stack([one, a, b, c, a * b, a * c, b * c, a * a - b * b, c * c]), d_x, d_y
+        through = look[3] * fall
+        return functions, within * (look[1] - through * a), within * (look[2] - through * b)
+    np.multiply(a, b, out=functions[4])
+    np.multiply(a, c, out=functions[5])
+    np.multiply(b, c, out=functions[6])
+    np.subtract(aa, bb, out=functions[7])
+    np.multiply(c, c, out=functions[8])
+    through = (look[3] + look[5] * a + look[6] * b + 2 * look[8] * c) * fall
+    d_x = within * (look[1] + look[4] * b + look[5] * c + 2 * look[7] * a - through * a)
+    d_y = within * (look[2] + look[4] * a + look[6] * c - 2 * look[7] * b - through * b)
+    return functions, d_x, d_y

@@ -29,8 +29,7 @@ _LINE_M = 0.004  # width of a line whose end carries no mark, to begin with [m]
 _IN_A_ROW = 3  # frames that must agree before a mark that was lost counts as found
 _PATIENCE = 12  # frames searched within reach of the last place; afterwards the whole picture, now and then
 _EVERY = 4
-_DOUBTED = 24  # frames in which other models of the look are tried
-_LIGHT_SHARE = 0.15  # of the way from outline to brightness centre: what is left of one-sided light in an outline
+_DOUBTED = 16  # frames in which other models of the look are tried
 _FLOOR_PX = 0.05  # of the steady offset's u: compression, sharpening, pixels
 _SCATTER_REACH = 4  # frames to either side for the local cubic
 
@@ -413,17 +412,15 @@ def _speeds(t: Floats, px: Floats) -> Floats:
 def _doubt(light: Floats, doubts: Floats) -> tuple[float, float, Floats]:
     """Steady and slowly changing uncertainty of the offset [px], and the mean way from outline to brightness centre.
 
-    Two things are asked: how far does the centre move when the look is described more simply and when the mark is
-    larger by its uncertainty, and how far is it from the centre of brightness.
+    Two things are asked of some frames: how far does the centre move when the look is described by other functions, and
+    when the mark is larger by its uncertainty. That it is the same in all frames, or changes, is told by their scatter.
     """
     if not len(light):
         return float("nan"), float("nan"), np.full(2, np.nan)
     mean = np.asarray(np.median(light, axis=0))
-    moved = np.median(doubts, axis=0) if len(doubts) else np.zeros((2, 2))
-    steady = np.hypot(np.hypot(*moved[0]), np.hypot(*moved[1])) / np.sqrt(2)
-    bias = float(np.sqrt(_FLOOR_PX**2 + (_LIGHT_SHARE * np.hypot(*mean)) ** 2 + steady**2))
-    swing = light - mean
-    slow = _LIGHT_SHARE * float(np.sqrt((swing**2).sum(axis=1).mean()))
-    changes = doubts - moved if len(doubts) else np.zeros((1, 2, 2))
-    wander = float(np.sqrt(slow**2 + 0.5 * float((changes**2).sum(axis=(1, 2)).mean())))
-    return bias, wander, mean
+    if not len(doubts):
+        return _FLOOR_PX, _FLOOR_PX, mean
+    moved = np.median(doubts, axis=0)
+    scatter = 1.4826 * np.median(np.abs(doubts - moved), axis=0)
+    bias = float(np.sqrt(_FLOOR_PX**2 + (moved**2).sum()))
+    return bias, float(np.sqrt((scatter**2).sum() / 2)), mean

@@ -165,7 +165,7 @@ class DiscEye:
                     best, cost = fit, fit.cost
         if best is None or float(np.hypot(*(best.p[:2] - near))) > reach:
             return None
-        return self._sight(best, view, patch, np.zeros(2)) if self._good(best, patch, None) else None
+        return self._sight(best, view, patch, np.zeros(2)) if self._good(best, patch, None, view.gray.shape) else None
 
     def near(self, view: View, place: Floats, velocity: Floats, gate_px: float, way_s: float) -> Sight | None:
         """The mark close to where it is expected."""
@@ -191,14 +191,14 @@ class DiscEye:
         disc, belief = self._disc(view, start, velocity), self._expected(view, start, way, gate)
         reach = 0.5 * self.radius + 2 + gate
         fit = fit_layer(patch, disc, belief, soften=(0.4, 0.0, 0.0), reach=reach)
-        if fit is None or not self._good(fit, patch, belief) or fit.edge < _PLAIN_EDGE or fit.misfit > _PLAIN_MISFIT:
+        if fit is None or not self._good(fit, patch, belief, view.gray.shape) or fit.edge < _PLAIN_EDGE or fit.misfit > _PLAIN_MISFIT:
             for other_start in _starts(start if fit is None else fit.p[:2], min(0.6 * self.radius, 4.0)):
                 p = belief.p.copy()
                 p[:2] = other_start
                 other = fit_layer(patch, disc, replace(belief, p=p), soften=(0.7, 0.3, 0.0, 0.0, 0.0), reach=reach)
                 if other is not None and (fit is None or other.cost < fit.cost):
                     fit = other
-        return None if fit is None or not self._good(fit, patch, belief) else (fit, patch)
+        return None if fit is None or not self._good(fit, patch, belief, view.gray.shape) else (fit, patch)
 
     def seek(self, view: View, place: Floats, last: Floats, since_s: float, reach_px: float, way_s: float) -> list[Sight]:
         """All that look like the mark within reach, best first."""
@@ -265,14 +265,16 @@ class DiscEye:
         if self.radius > 12:  # the inside of a large disc tells nothing of its place: every other pixel will do
             inner = np.hypot(x - centre[0], y - centre[1]) < self.radius - 8
             trust[inner & ((x + y) % 2 > 0)] = 0.0
+        trust[np.hypot(x - centre[0], y - centre[1]) > half + 0.5] = 0.0
         return Patch(x, y, view.gray[y0:y1, x0:x1].astype(float), scene * view.gain, sigma, trust)
 
     # --- judging ------------------------------------------------------------------------------------------------
 
-    def _good(self, fit: LayerFit, patch: Patch, belief: Belief | None) -> bool:
+    def _good(self, fit: LayerFit, patch: Patch, belief: Belief | None, shape: tuple[int, ...]) -> bool:
         """Whether this is the mark, as far as the picture can say."""
-        area = np.pi * self.radius**2
-        if fit.coverage.sum() < 0.6 * area or fit.cover < 0.5 or fit.edge < 0.25:
+        h, w = shape
+        inside = _share_inside(fit.p[:2], self.radius, (w, h))
+        if inside < 0.6 or fit.cover < 0.5 or fit.edge < 0.25:
             return False
         if abs(fit.p[RADIUS] / self.radius - 1) > max(0.06, 4 * self.u_size) or fit.p[SOFT] > 1.6:
             return False
@@ -289,16 +291,13 @@ class DiscEye:
         h, w = view.gray.shape
         from_middle = fit.p[:2] - np.array([(w - 1) / 2, (h - 1) / 2])
         squeeze = (self.radius / self.focal_px) ** 2  # a sphere's outline is centred a little farther out than its centre
-        weight = fit.coverage * np.abs(patch.seen - patch.scene)
-        total = max(float(weight.sum()), 1e-9)
-        light = np.array([float((weight * (patch.x - fit.p[0])).sum()), float((weight * (patch.y - fit.p[1])).sum())]) / total
         return Sight(
-            px=fit.p[:2] - squeeze * from_middle, u_px=np.sqrt(np.diag(fit.p_cov)[:2]), diameter_px=2 * float(fit.p[RADIUS]),
-            light_px=light, quality=fit.cover * max(fit.explained, 0.0), keep=fit,
+            px=fit.p[:2] - squeeze * from_middle, u_px=np.sqrt(np.diag(fit.p_cov)[:2]) * max(fit.misfit, 1.0) / np.sqrt(fit.edge), diameter_px=2 * float(fit.p[RADIUS]),
+            light_px=_light_shift(fit, self.radius), quality=fit.cover * max(fit.explained, 0.0), keep=fit,
         )  # fmt: skip
 
     def doubt(self, view: View, sight: Sight, velocity: Floats, way_s: float) -> Floats:
-        """How far the centre moves (2, 2) when the look is simpler, and when the radius is one sigma larger [px]."""
+        """How far the centre moves (2, 2) when the look is described by other functions, and when the radius is one sigma larger [px]."""
         assert self.belief is not None
         fit: LayerFit = sight.keep
         centre = fit.p[:2]
@@ -308,15 +307,17 @@ class DiscEye:
         moved = np.zeros((2, 2))
         if patch is None:
             return moved
-        simple = min(self._looks, 4)
+        other_looks = {9: 4, 4: 9, 1: 4}[self._looks]
         disc = self._disc(view, centre, velocity)
-        told = Belief(belief.p, belief.p_sigma, belief.look[:simple], look_spread(simple, float(belief.look[0])))
+        look = np.zeros(other_looks)
+        look[: min(4, self._looks)] = belief.look[:4]
+        told = Belief(belief.p, belief.p_sigma, look, look_spread(other_looks, float(look[0])))
         larger = belief.p.copy()
         larger[RADIUS] *= 1 + self.u_size
         sigma = belief.p_sigma.copy()
         sigma[RADIUS] = 1e-3 * self.radius
         for row, (shape, one) in enumerate(
-            ((replace(disc, looks=simple), told), (disc, Belief(larger, sigma, belief.look, belief.look_cov)))
+            ((replace(disc, looks=other_looks), told), (disc, Belief(larger, sigma, belief.look, belief.look_cov)))
         ):
             other = fit_layer(patch, shape, one, soften=(0.3, 0.0, 0.0), reach=2.0)
             if other is not None:
@@ -411,6 +412,25 @@ def _starts(near: Floats, reach: float) -> Iterator[Floats]:
     """The place itself, then around it."""
     for dx, dy in ((0, 0), (-1, 0), (1, 0), (0, -1), (0, 1)):
         yield near + 0.5 * reach * np.array([dx, dy], dtype=float)
+
+
+def _share_inside(centre: Floats, radius: float, size: tuple[int, int]) -> float:
+    """Share of a square around a disc that lies in a picture of this width and height."""
+    share = 1.0
+    for at, length in zip(centre, size, strict=True):
+        share *= float(np.clip(min(at + radius, length - 0.5) - max(at - radius, -0.5), 0, None)) / (2 * radius)
+    return share
+
+
+def _light_shift(fit: LayerFit, radius: float) -> Floats:
+    """Centre of brightness minus centre of the outline [px].
+
+    A slope of the look over a disc moves its centre of mass by radius/4 times slope over mean.
+    """
+    if fit.look.size == 1:
+        return np.zeros(2)
+    mean = fit.look[0] + 2 / 3 * fit.look[3] + (0.5 * fit.look[8] if fit.look.size == 9 else 0.0)
+    return np.asarray(fit.look[1:3] * radius / 4 / max(abs(float(mean)), 1.0))
 
 
 def _look_differs(one: Floats, other: Floats) -> float:

@@ -74,7 +74,7 @@ class Patch:
     sigma : (h, w) array
         Noise of each pixel [grey levels].
     trust : (h, w) array
-        1 where the scene behind is known, 0 where it is not.
+        1 where the scene behind is known, less where it is guessed, 0 where a pixel is to be left out.
     """
 
     x: Floats
@@ -115,9 +115,8 @@ class LayerFit:
         Share of the outline's edge that carried the fit.
     cost : float
         Mean robust loss of the patch's pixels, to compare fits of one patch.
-    residual : (h, w) array
-        Frame minus fit [grey levels].
-    coverage : (h, w) array
+    area : float
+        Of the outline, as far as it lies in the picture [px^2].
     """
 
     p: Floats
@@ -130,8 +129,7 @@ class LayerFit:
     cover: float
     edge: float
     cost: float
-    residual: Floats
-    coverage: Floats
+    area: float
 
 
 def fit_layer(
@@ -157,15 +155,13 @@ def fit_layer(
     LayerFit or None
         None where the fit ran away or there was nothing to hold on to.
     """
-    x, y = patch.x.ravel(), patch.y.ravel()
-    seen, scene = patch.seen.ravel(), patch.scene.ravel()
-    trust = patch.trust.ravel()
+    pixels = _Pixels.of(patch)
+    x, y, seen, scene, trust = pixels.x, pixels.y, pixels.seen, pixels.scene, pixels.trust
     p, look = belief.p.astype(float).copy(), belief.look.astype(float).copy()
     n_p, n_l = shape.parameters, shape.looks
     look_precision = np.linalg.inv(belief.look_cov)
     p_precision = np.where(np.isfinite(belief.p_sigma), 1.0 / np.maximum(belief.p_sigma, 1e-9) ** 2, 0.0)
-    middle_x, middle_y, half = float(x.mean()), float(y.mean()), max(float(np.ptp(x)), float(np.ptp(y))) / 2 + 0.5
-    tilt = np.stack([np.ones_like(x), (x - middle_x) / half, (y - middle_y) / half])
+    tilt = pixels.tilt
     n = n_p + n_l + 3
     prior = np.zeros((n, n))
     prior[:n_p, :n_p] = np.diag(p_precision)
@@ -182,9 +178,9 @@ def fit_layer(
         behind = (1.0 - cover) * lit
         residual = seen - behind - look @ drawn.basis
         contrast = _contrast(drawn.basis, look, lit, cover)
-        variance = _variance(patch.sigma.ravel(), drawn, contrast)
+        variance = _variance(pixels.noise2, drawn, contrast)
         scale = variance + (_EARLY_SHARE * contrast * min(extra, 1.0)) ** 2  # while it is not in place, all are outliers
-        foreign = _foreign(residual, cover, variance, contrast, patch.seen.shape) if extra < 1.0 else np.zeros_like(cover, bool)
+        foreign = _foreign(residual, cover, variance, contrast, pixels) if extra < 1.0 else np.zeros_like(cover, bool)
         weight = trust * ~foreign / (variance * (1.0 + residual**2 / scale / _OUTLIER**2))
         design = np.concatenate([drawn.d_colour - lit * drawn.d_cover, drawn.basis, (1.0 - cover) * scene * tilt])
         scaled = design * weight
@@ -204,13 +200,13 @@ def fit_layer(
             return None
         if extra == 0.0 and float(np.abs(move[:2]).max()) < _SETTLED_PX:
             break
-    return _judge(patch, shape, p, look, shade, tilt, prior)
+    return _judge(pixels, shape, p, look, shade, prior)
 
 
-def _variance(sigma: Floats, drawn: Drawn, contrast: float) -> Floats:
+def _variance(noise2: Floats, drawn: Drawn, contrast: float) -> Floats:
     """Noise, and what the model leaves unexplained under the outline and at its edge."""
     slope = np.hypot(drawn.d_cover[0], drawn.d_cover[1])
-    return np.asarray(sigma**2 + (contrast * (_MODEL_SHARE * drawn.basis[0] + _EDGE_SHARE * slope)) ** 2)
+    return np.asarray(noise2 + (contrast * (_MODEL_SHARE * drawn.basis[0] + _EDGE_SHARE * slope)) ** 2)
 
 
 def _contrast(basis: Floats, look: Floats, scene: Floats, cover: Floats) -> float:
@@ -218,30 +214,59 @@ def _contrast(basis: Floats, look: Floats, scene: Floats, cover: Floats) -> floa
     return float(np.sqrt(((look @ basis - cover * scene) ** 2).sum() / max(float((cover**2).sum()), 1e-9)))
 
 
-def _foreign(residual: Floats, cover: Floats, variance: Floats, contrast: float, shape: tuple[int, ...]) -> NDArray[np.bool_]:
+def _foreign(residual: Floats, cover: Floats, variance: Floats, contrast: float, pixels: "_Pixels") -> NDArray[np.bool_]:
     """Pixels outside the outline that show something else (the line, a clamp), and their neighbours."""
-    near = cv2.dilate((cover > 0.02).reshape(shape).astype(np.uint8), _DISC5)  # its own edge, not quite in place yet
-    outside = near.ravel() == 0
-    odd = outside & (np.abs(residual) > np.maximum(4 * np.sqrt(variance), _FOREIGN_SHARE * contrast))
+    odd = (cover < 0.02) & (residual**2 > np.maximum(16 * variance, (_FOREIGN_SHARE * contrast) ** 2))
     if not odd.any():
         return odd
-    grown = cv2.dilate(odd.reshape(shape).astype(np.uint8), _DISC7)
-    return np.asarray(grown.ravel().astype(bool))
+    near = cv2.dilate(pixels.grid(cover > 0.02), _DISC5)  # its own edge, not quite in place yet
+    grown = cv2.dilate(pixels.grid(odd) & (near == 0), _DISC7)
+    return np.asarray(grown.ravel()[pixels.at] > 0)
 
 
-def _judge(patch: Patch, shape: Shape, p: Floats, look: Floats, shade: Floats, tilt: Floats, prior: Floats) -> LayerFit | None:
+@dataclass(frozen=True, slots=True, eq=False)
+class _Pixels:
+    """Those pixels of a patch that count, as (n,) arrays; `at` is their place in it."""
+
+    x: Floats
+    y: Floats
+    seen: Floats
+    scene: Floats
+    noise2: Floats
+    trust: Floats
+    tilt: Floats  # (3, n): 1, column and row from -1 to 1
+    at: NDArray[np.intp]
+    shape: tuple[int, int]
+
+    @classmethod
+    def of(cls, patch: Patch) -> "_Pixels":
+        at = np.flatnonzero(patch.trust)
+        x, y = patch.x.ravel()[at], patch.y.ravel()[at]
+        half = max(patch.seen.shape) / 2
+        tilt = np.stack([np.ones_like(x), (x - patch.x[0, 0]) / half - 1.0, (y - patch.y[0, 0]) / half - 1.0])
+        return cls(
+            x, y, patch.seen.ravel()[at], patch.scene.ravel()[at], patch.sigma.ravel()[at] ** 2, patch.trust.ravel()[at],
+            tilt, at, (patch.seen.shape[0], patch.seen.shape[1]),
+        )  # fmt: skip
+
+    def grid(self, values: NDArray[np.bool_]) -> NDArray[np.uint8]:
+        """Back on the patch, 1 where true."""
+        out = np.zeros(self.shape, np.uint8)
+        out.ravel()[self.at] = values
+        return out
+
+
+def _judge(pixels: _Pixels, shape: Shape, p: Floats, look: Floats, shade: Floats, prior: Floats) -> LayerFit | None:
     """Quality and covariance at the solution."""
-    x, y = patch.x.ravel(), patch.y.ravel()
-    seen = patch.seen.ravel()
-    scene = patch.scene.ravel()
-    drawn = shape.draw(p, x, y, look)
+    seen, scene, tilt = pixels.seen, pixels.scene, pixels.tilt
+    drawn = shape.draw(p, pixels.x, pixels.y, look)
     cover = drawn.basis[0]
     lit = scene * (1.0 + shade @ tilt)
     residual = seen - (1.0 - cover) * lit - look @ drawn.basis
     contrast = _contrast(drawn.basis, look, lit, cover)
-    variance = _variance(patch.sigma.ravel(), drawn, contrast)
-    foreign = _foreign(residual, cover, variance, contrast, patch.seen.shape)
-    keep = patch.trust.ravel() * ~foreign
+    variance = _variance(pixels.noise2, drawn, contrast)
+    foreign = _foreign(residual, cover, variance, contrast, pixels)
+    keep = pixels.trust * ~foreign
     agree = keep / (1.0 + residual**2 / variance / _OUTLIER**2)
     design = np.concatenate([drawn.d_colour - lit * drawn.d_cover, drawn.basis, (1.0 - cover) * scene * tilt])
     try:
@@ -263,6 +288,5 @@ def _judge(patch: Patch, shape: Shape, p: Floats, look: Floats, shade: Floats, t
         misfit=float(1.4826 * np.median(np.abs(residual[inside]) / np.sqrt(variance[inside]))),
         contrast=contrast, cover=float((cover * agree).sum() / area),
         edge=float((slope * agree).sum() / max(float(slope.sum()), 1e-9)),
-        cost=float(np.average(np.log1p(residual**2 / (_OUTLIER * patch.sigma.ravel()) ** 2), weights=patch.trust.ravel())),
-        residual=residual.reshape(patch.seen.shape), coverage=cover.reshape(patch.seen.shape),
+        cost=float(np.average(np.log1p(residual**2 / (_OUTLIER**2 * pixels.noise2)), weights=pixels.trust)), area=area,
     )  # fmt: skip

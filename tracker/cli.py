@@ -92,7 +92,7 @@ def _folder_for(sheet: Path, out: Path | None, how_many: int) -> Path:
 def _measure_one(sheet: Path, folder: Path, overlay: bool, replace: bool, quiet: bool) -> None:
     from tracker.measure import measure_run  # heavy libraries load only when they are needed
     from tracker.report.folder import refuse_existing, write_folder
-    from tracker.report.terminal import one_line, result_table, warning_lines
+    from tracker.report.terminal import one_line, prediction_lines, result_table, warning_lines
 
     if not replace:
         refuse_existing(folder)
@@ -106,6 +106,8 @@ def _measure_one(sheet: Path, folder: Path, overlay: bool, replace: bool, quiet:
         screen.print(one_line(measured.result, folder), soft_wrap=True, highlight=False, markup=False)
         return
     screen.print(result_table(measured.result))
+    for line in prediction_lines(measured.result):
+        screen.print(line, soft_wrap=True, highlight=False, markup=False)
     for line in warning_lines(measured.result):
         errors.print(line, soft_wrap=True, highlight=False, markup=False)
     screen.print(f"Report: {folder / 'report.html'}", soft_wrap=True, highlight=False, markup=False)

@@ -8,7 +8,7 @@ from rich.console import Console
 
 from tracker.report.__main__ import main
 from tracker.report.demo import demo
-from tracker.report.terminal import one_line, result_table, warning_lines
+from tracker.report.terminal import one_line, prediction_lines, result_table, warning_lines
 
 
 def shown(result: object, width: int = 80) -> str:
@@ -31,7 +31,7 @@ def test_the_table_fits_eighty_columns_and_cuts_no_number() -> None:
     assert max(len(row.rstrip()) for row in text.splitlines()) <= 80
     rows = [row.split() for row in text.splitlines()]
     assert ["pick-up", "coefficient", "0.2130", "0.1985", "to", "0.2225", "0.747", "to", "0.966"] in rows
-    assert ["line", "speed", "3.297", "0.033", "m/s", "2.0", "0.747", "to", "0.966"] in rows
+    assert ["line", "speed", "3.297", "±", "0.033", "m/s", "2.0", "0.747", "to", "0.966"] in rows
 
 
 def test_a_name_from_a_sheet_is_no_markup() -> None:
@@ -54,3 +54,9 @@ def test_the_demo_command_writes_a_folder_and_says_where(tmp_path: Path, capsys:
     assert main([str(tmp_path / "d"), "--kind", "payout", "--frames", "12"]) == 2
     out, err = capsys.readouterr()  # type: ignore[attr-defined]
     assert out.strip() == str(tmp_path / "d" / "report.html") and "exists already and is kept" in err
+
+
+def test_what_the_laws_say_stands_below_the_table() -> None:
+    lines = prediction_lines(demo("surface-drop", frames=24).result)
+    assert lines
+    assert all(line.startswith("By ") and "None" not in line for line in lines)

@@ -23,6 +23,7 @@ from tracker.result import FrameMark, Prediction
 __all__ = ["measure_end"]
 
 Floats = NDArray[np.float64]
+_State = tuple[float, float, float, float]  # place, speed and their standard uncertainties
 HEADLINE = {
     "free-drop": "measured_gravity_mps2",
     "surface-drop": "effective_acceleration_mps2",
@@ -259,15 +260,37 @@ def _table(stage: Stage, follow: EndFollow, track: Track) -> pd.DataFrame:
     return table
 
 
+UNRESOLVED = 0.25  # of the speed: a change from frame to frame that no smoothing may hide
+
+
 def _speeds(track: Track) -> tuple[Floats, Floats]:
-    """Speed of the end, frame by frame, from a local cubic over five frames to either side, both coordinates."""
+    """Speed of the end, frame by frame, with its standard uncertainty.
+
+    From a local cubic over five frames to either side where motion allows it, that is where a parabola over two frames
+    to either side says the same; from that parabola where not, half the difference in u; empty where the speed
+    changes too much from one frame to the next for either.
+    """
     across = replace(track, z_m=track.x_m)
     speed, u = np.full(track.t_s.size, np.nan), np.full(track.t_s.size, np.nan)
     for i in np.flatnonzero(np.isfinite(track.z_m) & np.isfinite(track.t_s)):
-        down, side = local_state(track, float(track.t_s[i]), reach=5), local_state(across, float(track.t_s[i]), reach=5)
-        if down is not None and side is not None:
-            speed[i] = float(np.hypot(down[1], side[1]))
-            u[i] = float(np.hypot(down[1] * down[3], side[1] * side[3])) / speed[i] if speed[i] > 0 else down[3]
+        at = float(track.t_s[i])
+        wide = _speed(local_state(across, at, reach=5), local_state(track, at, reach=5))
+        narrow = _speed(local_state(across, at, reach=2, degree=2), local_state(track, at, reach=2, degree=2))
+        if wide is None or narrow is None:
+            continue
+        apart = abs(wide[0] - narrow[0])
+        if apart <= 2 * float(np.hypot(wide[1], narrow[1])):
+            speed[i], u[i] = wide
+        elif apart <= UNRESOLVED * narrow[0]:
+            speed[i], u[i] = narrow[0], float(np.hypot(narrow[1], 0.5 * apart))
+    return speed, u
+
+
+def _speed(side: _State | None, down: _State | None) -> tuple[float, float] | None:
+    if side is None or down is None:
+        return None
+    speed = float(np.hypot(side[1], down[1]))
+    u = float(np.hypot(down[1] * down[3], side[1] * side[3])) / speed if speed > 0 else down[3]
     return speed, u
 
 

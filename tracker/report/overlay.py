@@ -162,7 +162,8 @@ class Painter:
         strip = np.full((_even(height), self.width), DARK[0], np.uint8)
         kind = self._result.kind
         middle = {"payout": "arc height above rim", "drawn": "paid out"}.get(kind, "height of the end")
-        for i, label in enumerate(("frame", "time", middle, "line speed")):
+        speed = "line speed" if kind in ("payout", "drawn") else "speed of the end"
+        for i, label in enumerate(("frame", "time", middle, speed)):
             self._small.write(strip, label, self._cell(i), TIMELINE + 2, level=190)
         for (shape, words), (row, column) in zip(self._legend(), self._legend_places(), strict=True):
             after_shape = column + (self._small.height + 4 if shape else 0)

@@ -105,9 +105,10 @@ def _place(result: Result) -> Plot | None:
 
 
 def _speed(result: Result) -> Plot | None:
-    t_column = "t_s" if result.kind in ("payout", "drawn") else "end_t_s"
+    of_line = result.kind in ("payout", "drawn")
     wanted = ("line_speed_mps", "peak_end_speed_mps", "speed_ripple")
-    course = _course(result, "line_speed_mps", t_column, "u_line_speed_mps", "line speed v", "m/s", ("_speed_mps",), wanted)
+    t_column, words = ("t_s", "line speed v") if of_line else ("end_t_s", "speed of the end v")
+    course = _course(result, "line_speed_mps", t_column, "u_line_speed_mps", words, "m/s", ("_speed_mps",), wanted)
     if course is None:
         return None
     return _over_time(course, "line-speed", _finding(result, wanted) or _span(course), residuals=False)

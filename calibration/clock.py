@@ -403,14 +403,15 @@ def _usual_steps(step: Array) -> tuple[Array, bool]:
     if len(step) < 2 * LASTING:
         return one, False
     around = np.median(np.lib.stride_tricks.sliding_window_view(np.pad(step, 2, mode="reflect"), 5), axis=1)
-    if around.max() <= max(LEAP * around.min(), around.min() + 2.01):  # rounding alone makes 3 ticks of 5
+    slow = around > max(LEAP * around.min(), around.min() + 2.01)  # rounding alone makes 3 ticks of 5
+    if not _lasts(slow) or not _lasts(~slow):
         return one, False
     order = np.sort(around)
     leaps = np.flatnonzero(order[1:] > np.maximum(LEAP * order[:-1], order[:-1] + 2.01))
     if len(leaps) == 0:  # a ramp without a leap: the rate glides
         return around, True
     level = np.searchsorted((order[leaps] + order[leaps + 1]) / 2, around)
-    lasting = [k for k in range(len(leaps) + 1) if _longest_run(level == k) >= LASTING]
+    lasting = [k for k in range(len(leaps) + 1) if _lasts(level == k)]
     if len(lasting) < 2 or (np.diff(level) != 0).sum() + 1 > len(step) / 4:
         return one, False
     fits = np.isin(level, lasting)
@@ -422,9 +423,10 @@ def _usual_steps(step: Array) -> tuple[Array, bool]:
     return beside[nearest, np.arange(len(step))], True
 
 
-def _longest_run(flags: NDArray[np.bool_]) -> int:
+def _lasts(flags: NDArray[np.bool_]) -> bool:
+    """Whether flags stay up for a while somewhere."""
     edges = np.flatnonzero(np.diff(np.concatenate([[0], flags.astype(np.int8), [0]])))
-    return int((edges[1::2] - edges[::2]).max(initial=0))
+    return int((edges[1::2] - edges[::2]).max(initial=0)) >= LASTING
 
 
 def _usual(step: Array) -> float:

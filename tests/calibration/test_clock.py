@@ -326,6 +326,7 @@ def test_stamps_that_are_no_time_are_refused() -> None:
 )
 @example(fps=907.75, base=Fraction(1, 15360), start=0, lost={12: 3}, jitter=0.03, seed=21)  # was called a gap of no whole number
 @example(fps=70.0, base=N90K, start=0, lost={3: 1, 4: 1, 5: 1}, jitter=0.0, seed=0)  # was called a ramp
+@example(fps=70.0, base=Fraction(1001, 240000), start=0, lost={3: 1, 5: 1, 6: 1}, jitter=0.0, seed=0)  # was called a glide
 def test_laws_of_every_clock(fps: float, base: Fraction, start: int, lost: dict[int, int], jitter: float, seed: int) -> None:
     """Zero at the first frame, rising, true within a tick whatever is lost, shifted or jittered; losses counted."""
     periods = np.ones(120, dtype=int)

@@ -210,6 +210,7 @@ def test_a_lone_sample_is_reached_by_seeking(fault: str, monkeypatch: pytest.Mon
         monkeypatch.setattr("tracker.clip._Reader._goes_to", lambda self, key: self._container.seek(keys[2], stream=self._stream) or True)
     np.testing.assert_array_equal(clip.sample([wanted])[0], every[wanted])
     assert (len(decoded) < clip.frame_count / 4) == (fault != "seek cannot be checked")
+    assert [i for i, gray in clip.frames(wanted) if (gray == every[i]).all()] == list(range(wanted, clip.frame_count))
     assert clip.notices == ()
 
 

@@ -17,6 +17,7 @@ from scipy.spatial import cKDTree
 __all__ = ["Path", "find_path"]
 
 _FINE, _BROAD = 1.2, 41  # px: sigma that joins beads into a line, box that takes the broad shadow out
+_SHARES = (0.25, 0.4, 0.6)  # of the line's contrast, tried in turn
 _MOST_PIECES = 60
 _MOST_BRANCHES = 0.35  # share of the pixels found that may lie off the line, in its shadow or at an edge of the scene
 _LINK_COST = 3.0  # a pixel of gap costs as much as three of line
@@ -75,7 +76,24 @@ def find_path(
     if doubt is not None:
         size = np.maximum(size - doubt, 0.0)
     ridge = _ridge(size)
-    found = _pieces(ridge, noise)
+    best, most = None, 0.0
+    for share in _SHARES:  # what a shadow or a reflection adds is below the line's own contrast
+        path = _at_share(ridge, noise, share, np.asarray(origin_px, float), np.asarray(up, float), gap_px)
+        if path is None:
+            continue
+        column, row = path.points_px.astype(np.intp).T
+        along = float(ridge[row, column].clip(0, path.contrast).sum())
+        if along > 1.05 * most:  # a higher share only where it finds more of the line
+            best, most = path, along
+    return best
+
+
+def _at_share(
+    ridge: NDArray[np.float32], noise: float, share: float, origin: NDArray[np.float64], up: NDArray[np.float64],
+    gap_px: float,
+) -> Path | None:  # fmt: skip
+    """The best plausible line among the pixels above a share of the contrast."""
+    found = _pieces(ridge, noise, share)
     if found is None:
         return None
     rows, columns, labels, contrast = found
@@ -85,14 +103,14 @@ def find_path(
     best: Path | None = None
     for g in np.argsort(-np.bincount(group))[:3]:
         members = np.nonzero(group == g)[0]
-        path = _longest(graph, members, points, ridge[rows, columns], contrast, np.asarray(origin_px, float))
-        path = _cut_below_rim(path, points, np.asarray(origin_px, float), np.asarray(up, float))
+        path = _longest(graph, members, points, ridge[rows, columns], contrast, origin)
+        path = _cut_below_rim(path, points, origin, up)
         length = float(np.hypot(*np.diff(points[path], axis=0).T).sum()) if path.size > 1 else 0.0
         aside, _ = cKDTree(points[path]).query(points[members])
         width = 4.0 * float(np.median(aside)) + 1.0  # of evenly spread distances up to half the width
         if (aside > max(1.5 * width, 5.0)).mean() > _MOST_BRANCHES:
             continue
-        if not _plausible(points[path], length, width, np.asarray(origin_px, float), difference.shape):
+        if not _plausible(points[path], length, width, origin, ridge.shape):
             continue
         if best is None or path.size > best.points_px.shape[0]:
             best = Path(points[path], width, contrast)
@@ -105,7 +123,7 @@ def _ridge(size: NDArray[np.float32]) -> NDArray[np.float32]:
 
 
 def _pieces(
-    ridge: NDArray[np.float32], noise: float
+    ridge: NDArray[np.float32], noise: float, share: float
 ) -> tuple[NDArray[np.intp], NDArray[np.intp], NDArray[np.intp], float] | None:
     """Rows, columns and piece numbers of the pixels on the line, and the line's contrast."""
     floor = max(3.0 * noise, 2.0)  # the blur has brought the noise down to about a quarter
@@ -113,7 +131,7 @@ def _pieces(
     if strong.sum() < 40:
         return None
     contrast = float(np.percentile(ridge[strong], 90))
-    mask = (ridge > max(floor, 0.25 * contrast)).astype(np.uint8)
+    mask = (ridge > max(floor, share * contrast)).astype(np.uint8)
     count, label, stats, _ = cv2.connectedComponentsWithStats(mask, connectivity=8)
     area = stats[:, cv2.CC_STAT_AREA].copy()
     area[0] = 0

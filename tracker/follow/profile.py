@@ -12,11 +12,15 @@ from dataclasses import dataclass, field
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.optimize import least_squares
+from scipy.special import ndtr
 
 __all__ = ["ProfilePool", "SideLight", "Template", "bar_profile", "fit_centres", "side_light", "side_light_offset"]
 
 _MOST_SHIFT = 0.8  # px: the fit is linear about its start, farther than this it must start again
 _SECTORS = 24  # directions of the normal apart in the pool
+_FLAT_BAR = 4.0  # blurs: in a narrower bar a shift and an uneven light look alike
+_NO_BAR = 0.04  # of the height: what a bar's fit may leave
 _LEAST_DOUBT_PX = 0.1  # of the place of an edge against the body's own, whatever the light
 
 
@@ -56,8 +60,6 @@ class Template:
 
 def bar_profile(offset_px: NDArray[np.float64], width_px: float, blur_px: float) -> NDArray[np.float64]:
     """A bar of the given width under Gaussian blur, of height 1 before the blur."""
-    from scipy.special import ndtr
-
     half = width_px / 2
     profile = ndtr((offset_px + half) / blur_px) - ndtr((offset_px - half) / blur_px)
     return np.asarray(profile, dtype=np.float64)
@@ -185,11 +187,13 @@ def side_light(pool: ProfilePool) -> SideLight:
     """
     width = 2 * np.pi / _SECTORS
     rows = []
+    mean = pool.mean()
+    bar = fit_bar(pool.offset_px, mean - 0.5 * (np.median(mean[:3]) + np.median(mean[-3:])))
     for k in range(_SECTORS):
         angle = (k + 0.5) * width - np.pi
         if pool.count[k] < 50:
             continue
-        middle, doubt = side_light_offset(pool.offset_px, pool.total[k] / pool.count[k])
+        middle, doubt = side_light_offset(pool.offset_px, pool.total[k] / pool.count[k], bar)
         rows.append((np.cos(angle), np.sin(angle), middle, doubt, pool.count[k]))
     if len(rows) < 3:
         return SideLight.unknown()
@@ -206,25 +210,68 @@ def side_light(pool: ProfilePool) -> SideLight:
     return SideLight(vector, float(np.hypot(max(spread, typical), unsure)))
 
 
-def side_light_offset(offset_px: NDArray[np.float64], profile: NDArray[np.float64]) -> tuple[float, float]:
-    """Middle of the silhouette against the place the template fit gives, and its standard uncertainty [px].
+def side_light_offset(
+    offset_px: NDArray[np.float64], profile: NDArray[np.float64], bar: tuple[float, float] | None = None
+) -> tuple[float, float]:
+    """Middle of the body against the place the template fit gives, and its standard uncertainty [px].
 
-    A glint makes a peak off the axis, but both edges of the body still differ from the scene: the middle between the two
-    outermost crossings of a low level is taken, at several levels, and their spread is the uncertainty.
+    Where the body is seen from flank to flank, a bar whose brightness goes evenly from one flank to the other is fitted,
+    of the `bar`'s width and blur. Where a glint outshines the body no bar fits, but the body's edges still differ
+    a little from the scene: then the middle between the outermost crossings of low levels is taken, with their spread.
     """
     floor = np.array([np.median(profile[:3]), np.median(profile[-3:])])
-    level = np.interp(offset_px, offset_px[[0, -1]], floor)
-    p = np.asarray(profile - level)
+    p = np.asarray(profile - np.interp(offset_px, offset_px[[0, -1]], floor))
     high = float(p.max())
     if high <= 0:
         return 0.0, 0.4
-    middles = []
-    for share in (0.06, 0.1, 0.15, 0.2):
-        over = np.nonzero(p >= share * high)[0]
-        left = _crossing(offset_px[: over[0] + 1][::-1], p[: over[0] + 1][::-1], share * high)
-        right = _crossing(offset_px[over[-1] :], p[over[-1] :], share * high)
-        middles.append(0.5 * (left + right))
+    bar = fit_bar(offset_px, p) if bar is None else bar
+    shift, misfit = _lit_bar(offset_px, p, *bar)
+    if misfit < _NO_BAR * high and bar[0] > _FLAT_BAR * bar[1]:
+        return shift, max(0.04, misfit / high * bar[0])
+    middles = [0.5 * sum(_outer(offset_px, p, share * high)) for share in (0.06, 0.1, 0.15, 0.2)]
     return float(np.mean(middles)), max(float(np.std(middles)), 0.03)
+
+
+def fit_bar(offset_px: NDArray[np.float64], profile: NDArray[np.float64]) -> tuple[float, float]:
+    """Width and blur of the evenly bright bar nearest to a profile [px]."""
+    wide = profile > 0.5 * profile.max()
+    step = float(offset_px[1] - offset_px[0])
+    start = np.array([float(profile.max()), max(float(wide.sum()) * step, 1.0), 0.9, 0.0])
+
+    def left(x: NDArray[np.float64]) -> NDArray[np.float64]:
+        return np.asarray(x[0] * bar_profile(offset_px - x[3], x[1], x[2]) - profile)
+
+    low, high = [0.0, 0.5, 0.35, -1.0], [np.inf, 2 * float(offset_px[-1]), 3.0, 1.0]
+    found = least_squares(left, np.clip(start, np.array(low) + 1e-6, np.array(high) - 1e-6), bounds=(low, high))
+    return float(found.x[1]), float(found.x[2])
+
+
+def _lit_bar(
+    offset: NDArray[np.float64], p: NDArray[np.float64], width: float, blur: float
+) -> tuple[float, float]:
+    """Place of a bar whose brightness changes evenly across it, and the root mean square of what the fit leaves."""
+    place = np.arange(-1.2, 1.2001, 0.02)
+    x = offset[None, :] - place[:, None]
+    u1, u2 = (x + width / 2) / blur, (x - width / 2) / blur
+    even = ndtr(u1) - ndtr(u2)
+    bell = np.exp(-0.5 * u1**2) - np.exp(-0.5 * u2**2)
+    tilted = x * even + blur * bell / np.sqrt(2 * np.pi)
+    ee, et, tt = (even**2).sum(1), (even * tilted).sum(1), (tilted**2).sum(1)
+    pe, pt = even @ p, tilted @ p
+    det = ee * tt - et**2
+    a, b = (pe * tt - pt * et) / det, (pt * ee - pe * et) / det
+    left = ((p - a[:, None] * even - b[:, None] * tilted) ** 2).mean(axis=1)
+    i = int(np.clip(np.argmin(left), 1, place.size - 2))
+    bend = left[i - 1] - 2 * left[i] + left[i + 1]
+    fine = 0.5 * (left[i - 1] - left[i + 1]) / bend if bend > 0 else 0.0
+    return float(place[i] + 0.02 * np.clip(fine, -1, 1)), float(np.sqrt(left[i]))
+
+
+def _outer(offset: NDArray[np.float64], p: NDArray[np.float64], value: float) -> tuple[float, float]:
+    """Outermost places where a profile passes a value."""
+    over = np.nonzero(p >= value)[0]
+    left = _crossing(offset[: over[0] + 1][::-1], p[: over[0] + 1][::-1], value)
+    return left, _crossing(offset[over[-1] :], p[over[-1] :], value)
 
 
 def _crossing(offset: NDArray[np.float64], falling: NDArray[np.float64], value: float) -> float:

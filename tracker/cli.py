@@ -145,13 +145,10 @@ def _each(paths: list[Path], work: Callable[[Path], None]) -> None:
     for path in paths:
         try:
             work(path)
-        except CannotMeasure as refusal:
-            print(f"{path.name}: {refusal}", file=sys.stderr)
-            worst = max(worst, 3)
-        except BadInput as fault:
+        except (BadInput, CannotMeasure) as fault:
             says = str(fault)
-            print(says if path.name in says else f"{path.name}: {says}", file=sys.stderr)
-            worst = max(worst, 2)
+            print(says if says.startswith(path.name) else f"{path.name}: {says}", file=sys.stderr)
+            worst = max(worst, 3 if isinstance(fault, CannotMeasure) else 2)
     if worst:
         raise typer.Exit(worst)
 

@@ -127,7 +127,7 @@ def test_sound_only(tmp_path):
         container.mux(stream.encode(frame))
         container.mux(stream.encode(None))
     (tmp_path / "run.toml").write_text(sheet_text(TinyDrop()), encoding="utf-8")
-    one_sentence(linefall("measure", tmp_path / "run.toml"), 2, "drop.mp4", "picture")
+    one_sentence(linefall("measure", tmp_path / "run.toml"), 2, "drop.mp4", "sound only")
 
 
 def test_truncated_clip_is_refused(bench, tmp_path):

@@ -28,6 +28,9 @@ __all__ = ["Stage", "set_stage"]
 SAMPLED_FRAMES = 24
 """Frames from which background and board are taken: a moving line covers any one pixel in few of them."""
 
+POSSIBLE_FOCAL = (0.35, 6.0)
+"""Focal lengths of cameras, in lengths of the picture's longer side: from a phone's widest to a long telephoto."""
+
 BOARD_FRAMES = 6
 """Of these, frames in which the board is sought; their median beats noise and a line that crosses it."""
 
@@ -194,7 +197,29 @@ def _plane(file: SheetFile, clip: Clip, sampled: list[NDArray[np.uint8]]) -> tup
         u_plumb_px=file.u("datum.plumb_px") if plumb else 0.7,
         station=_station(file),
     )
+    _refuse_impossible_lens(file, find, spec, (clip.width, clip.height))
     return find, plane
+
+
+def _refuse_impossible_lens(file: SheetFile, find: BoardFind, spec: BoardSpec, size: tuple[int, int]) -> None:
+    """Square and distance together say what lens the camera has; one that no phone has means that one of them is wrong."""
+    distance = file.sheet.camera.distance_m
+    if distance is None or find.along_line:
+        return
+    focal = find.square_px / spec.square_m * (distance + file.sheet.board.offset_m)
+    share = focal / max(size)
+    if POSSIBLE_FOCAL[0] <= share <= POSSIBLE_FOCAL[1]:
+        return
+    raise BadInput(
+        f"{file.path.name}: board.square_m = {spec.square_m:g} with camera.distance_m = {distance:g} would need a focal length of "
+        f"{share:.2f} picture lengths, where cameras have {POSSIBLE_FOCAL[0]:g} to {POSSIBLE_FOCAL[1]:g}.",
+        f"One of the two is wrong by a factor of about {_factor(share):.2g}: both are in metres.",
+    )
+
+
+def _factor(share: float) -> float:
+    usual = 1.0  # picture lengths: between a wide and a normal phone lens
+    return usual / share if share < usual else share / usual
 
 
 def _board_pictures(file: SheetFile, clip: Clip, sampled: list[NDArray[np.uint8]]) -> list[NDArray[np.uint8]]:

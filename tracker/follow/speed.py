@@ -166,10 +166,9 @@ def _from_marks(
             basis += "; the texture does not follow them and is left out"
     v, u_v, paid, u_paid = fit.at(at_s)
     near = _near(at_s, np.concatenate([rows.t, texture.from_s[np.isfinite(texture.u_m)]] if texture is not None else [rows.t]), frame_s)
-    off = abs(fit.ratio - 1.0)
-    conflict = bool(off > _ODD_RATIO)  # then they are not the marks that the sheet means, or were joined wrongly
-    if conflict:
-        basis += f"; they measure {100 * off:.0f} % off their stated spacing, which no scale error explains"
+    conflict = spacing_m is not None and len(tracks) > 1 and (fit.tied == 0 or abs(fit.ratio - 1.0) > _ODD_RATIO)
+    if conflict:  # then they are not the marks that the sheet means, or were joined wrongly
+        basis += "; they do not lie a whole number of their stated spacings apart, by more than a scale error explains"
     verdict = np.where(near, "ambiguous" if conflict else "sure", "none")
     v, u_v, paid, u_paid = (np.where(near, x, np.nan) for x in (v, u_v, paid, u_paid))
     return SpeedSeries(
@@ -262,6 +261,7 @@ class _Fit:
         self.marks = int(rows.track.max()) + 1
         self.stretch = self.u_stretch = self.ratio = self.u_ratio = float("nan")
         self.foretold = 0.0
+        self.tied = 0  # pairs of marks that lie a whole number of spacings apart
 
     def basis(self, t: Floats, order: int = 0) -> Floats:
         inside = np.clip(t, self.start, self.end)
@@ -331,7 +331,9 @@ class _Fit:
         stretch[self.size + self.marks + 1] = 1.0
         held, y, u = [*held, stretch], [*y, 0.0], [*u, _U_RATIO]
         if self.spacing_m is not None:
-            for row in self._spacings(width):
+            rows = self._spacings(width)
+            self.tied = len(rows)
+            for row in rows:
                 held, y, u = [*held, row], [*y, 0.0], [*u, _U_PLACEMENT * self.spacing_m]
         return np.array(held), np.array(y), np.array(u)
 

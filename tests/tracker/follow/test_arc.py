@@ -60,7 +60,7 @@ def test_noise_of_the_points_comes_out_in_u(rng):
 def test_shifted_line_shifts_the_arc(rng):
     hoop = Hoop()
     points = hoop.point(np.arange(0.0, hoop.length, 1.0)) + rng.normal(0, 0.02, (int(np.ceil(hoop.length)), 2))
-    one, two = arc_of(points), arc_of(points + [7.25, -3.5])
+    one, two = arc_of(points), arc_of(points + np.array([7.25, -3.5]))
     assert two.apex_px - one.apex_px == pytest.approx([7.25, -3.5], abs=1e-6)
     mirrored = arc_of(points * [-1, 1])
     assert mirrored.apex_m[1] == pytest.approx(one.apex_m[1], abs=1e-9)
@@ -125,7 +125,7 @@ def test_carried_coordinate_sees_a_jump_of_the_rim():
     normal = np.column_stack([-tangent[:, 1], tangent[:, 0]]) / np.hypot(*tangent.T)[:, None]
     still = np.zeros(len(metres))
     one = along_line(metres, still, normal, np.zeros(len(metres)), 1 / 240)
-    two = along_line(metres + [0, 1.5 * SCALE], still, normal, np.full(len(metres), 1 / 240), 1 / 240)
+    two = along_line(metres + np.array([0, 1.5 * SCALE]), still, normal, np.full(len(metres), 1 / 240), 1 / 240)
     # the picture stayed, the rim's level is taken 1.5 px lower
     back = carried_jump(one, type(two)(metres, two.sigma_m, two.t_s, two.stretch, two.doubt_m), still, normal)
     assert back == pytest.approx(1.5 * SCALE, abs=0.05 * SCALE)

@@ -33,7 +33,7 @@ _LIMB = 0.25  # the shading's slope is unbounded where a ball's surface turns aw
 
 def disc_looks(radius_px: float) -> int:
     """How many functions of look a disc of this size can carry: 9, 4 or 1."""
-    return 9 if radius_px >= 4.5 else 4 if radius_px >= 2.5 else 1
+    return 9 if radius_px >= 2.8 else 4 if radius_px >= 2.5 else 1
 
 
 def roundness(velocity: Floats, time_slope: Floats, from_middle: Floats, focal_px: float) -> Floats:

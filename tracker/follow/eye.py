@@ -19,7 +19,8 @@ Floats = NDArray[np.float64]
 
 U_RADIUS = 0.007  # relative: a caliper on the mark, the board's scale at the mark's place
 U_ORIGIN_PX = 1.5  # a technician's click
-_SOFT, _U_SOFT = 0.6, 0.25  # blur of an edge by lens and pixel [px]
+_SOFT, _U_SOFT = 0.8, 0.6  # blur of an edge by lens and pixel, before it is known [px]
+_SOFT_KEPT = 0.08  # how much it may change from frame to frame, relative
 _GRID = 40  # the light of a frame is read off about so many columns and rows
 _SURE_PX = 1.2  # a place foretold closer than this is a good enough start
 _PLAIN_EDGE, _PLAIN_MISFIT = 0.6, 1.8  # of a fit that is plainly right
@@ -131,6 +132,7 @@ class DiscEye:
     u_size: float = U_RADIUS
     u_way: float = 0.15  # relative, of the way during the exposure
     belief: Belief | None = None
+    level: float = 100.0  # of the look, to say how much one-sided light may change it [grey levels]
     burnt: NDArray[np.bool_] | None = None  # where the background shows the mark itself, in the scene's pixels
 
     @property
@@ -154,7 +156,9 @@ class DiscEye:
         core = patch.seen[away < 0.6 * self.radius]
         look = np.zeros(self._looks)
         look[0] = float(np.median(core))
-        spread = look_spread(self._looks, float(look[0]))
+        around = float(np.median(patch.scene[(away > self.radius + 1) & (patch.trust > 0)]))
+        self.level = max(float(look[0]), abs(float(look[0]) - around))
+        spread = look_spread(self._looks, self.level)
         best, cost = None, np.inf
         for start in _starts(near, min(reach, 0.5 * self.radius + 1)):
             p = np.array([*start, self.radius, _SOFT, 0.0, 0.0])
@@ -225,7 +229,7 @@ class DiscEye:
         p[RADIUS] = self.radius
         look, cov = fit.look / view.gain, fit.look_cov / view.gain**2 + jitter
         if self.belief is not None:  # what lamps make likely is said again: jitter would forget it
-            usual = np.linalg.inv(look_spread(self._looks, float(look[0])))
+            usual = np.linalg.inv(look_spread(self._looks, self.level))
             usual[0, 0] = 0.0
             precision = np.linalg.inv(cov)
             cov = np.linalg.inv(precision + _USUAL * usual)
@@ -246,7 +250,7 @@ class DiscEye:
         length = float(np.hypot(*way))
         p = np.array([*place, self.radius, self.belief.p[SOFT], *way])
         u_way = 0.05 + self.u_way * length + (0.3 * gate if length > 0.5 * self.radius else 0.0)
-        sigma = np.array([np.inf, np.inf, self.u_size * self.radius, 0.05, u_way, u_way])
+        sigma = np.array([np.inf, np.inf, self.u_size * self.radius, _SOFT_KEPT * self.belief.p[SOFT], u_way, u_way])
         return Belief(p, sigma, self.belief.look * view.gain, self.belief.look_cov * view.gain**2)
 
     def _patch(self, view: View, centre: Floats, half: float) -> Patch | None:
@@ -262,10 +266,11 @@ class DiscEye:
             at = np.rint(view.to_scene(np.stack([x, y], axis=-1))).astype(np.intp)
             h, w = self.burnt.shape
             trust[self.burnt[np.clip(at[..., 1], 0, h - 1), np.clip(at[..., 0], 0, w - 1)]] = 0.05
-        if self.radius > 12:  # the inside of a large disc tells nothing of its place: every other pixel will do
-            inner = np.hypot(x - centre[0], y - centre[1]) < self.radius - 8
-            trust[inner & ((x + y) % 2 > 0)] = 0.0
-        trust[np.hypot(x - centre[0], y - centre[1]) > half + 0.5] = 0.0
+        away = np.hypot(x - centre[0], y - centre[1])
+        stride = int(np.clip(self.radius / 8, 1, 6))
+        if stride > 1:  # the inside of a large disc tells little of its place: one pixel of many will do
+            trust[(away < self.radius - 6) & ((x % stride > 0) | (y % stride > 0))] = 0.0
+        trust[away > half + 0.5] = 0.0
         return Patch(x, y, view.gray[y0:y1, x0:x1].astype(float), scene * view.gain, sigma, trust)
 
     # --- judging ------------------------------------------------------------------------------------------------
@@ -274,9 +279,10 @@ class DiscEye:
         """Whether this is the mark, as far as the picture can say."""
         h, w = shape
         inside = _share_inside(fit.p[:2], self.radius, (w, h))
-        if inside < 0.6 or fit.cover < 0.5 or fit.edge < 0.25:
+        if inside < 0.5 or fit.cover < 0.5 or fit.edge < 0.25:
             return False
-        if abs(fit.p[RADIUS] / self.radius - 1) > max(0.06, 4 * self.u_size) or fit.p[SOFT] > 1.6:
+        softest = max(1.6, 0.35 * self.radius) if belief is None else 1.5 * float(belief.p[SOFT]) + 0.5
+        if abs(fit.p[RADIUS] / self.radius - 1) > max(0.06, 4 * self.u_size) or fit.p[SOFT] > softest:
             return False
         if max(fit.p_cov[0, 0], fit.p_cov[1, 1]) > (0.2 * self.radius) ** 2:
             return False
@@ -285,7 +291,7 @@ class DiscEye:
             return False
         if belief is None:
             return True
-        return _look_differs(fit.look, belief.look) < 0.2 * abs(float(belief.look[0])) + 6 * noise
+        return _look_differs(fit.look, belief.look) < 0.2 * max(abs(float(belief.look[0])), fit.contrast) + 6 * noise
 
     def _sight(self, fit: LayerFit, view: View, patch: Patch, velocity: Floats) -> Sight:
         h, w = view.gray.shape
@@ -307,11 +313,13 @@ class DiscEye:
         moved = np.zeros((2, 2))
         if patch is None:
             return moved
-        other_looks = {9: 4, 4: 9, 1: 4}[self._looks]
+        other_looks = {9: 4, 4: 1, 1: 4}[self._looks]
         disc = self._disc(view, centre, velocity)
         look = np.zeros(other_looks)
-        look[: min(4, self._looks)] = belief.look[:4]
-        told = Belief(belief.p, belief.p_sigma, look, look_spread(other_looks, float(look[0])))
+        look[0] = belief.look[0]
+        if min(other_looks, self._looks) > 1:
+            look[1:4] = belief.look[1:4]
+        told = Belief(belief.p, belief.p_sigma, look, look_spread(other_looks, self.level))
         larger = belief.p.copy()
         larger[RADIUS] *= 1 + self.u_size
         sigma = belief.p_sigma.copy()

@@ -12,6 +12,7 @@ each time, so that neighbouring frames share no error by way of a motion model).
 """
 
 from dataclasses import dataclass
+from functools import lru_cache
 from typing import Protocol
 
 import cv2
@@ -28,8 +29,6 @@ _MODEL_SHARE = 0.03  # of the contrast: what smooth looks leave unexplained, how
 _EDGE_SHARE = 0.10  # and of the edge's steepness: how pictures are sharpened and compressed is not known
 _EARLY_SHARE = 0.30
 _FOREIGN_SHARE = 0.25  # of the contrast, outside the outline: something else is there
-_DISC5 = np.asarray(cv2.getStructuringElement(cv2.MORPH_ELLIPSE, (5, 5)))
-_DISC7 = np.asarray(cv2.getStructuringElement(cv2.MORPH_ELLIPSE, (7, 7)))
 _SCENE_SIGMA = 0.05  # by how much shadows may dim the scene behind, and how unevenly
 
 
@@ -180,7 +179,7 @@ def fit_layer(
         contrast = _contrast(drawn.basis, look, lit, cover)
         variance = _variance(pixels.noise2, drawn, contrast)
         scale = variance + (_EARLY_SHARE * contrast * min(extra, 1.0)) ** 2  # while it is not in place, all are outliers
-        foreign = _foreign(residual, cover, variance, contrast, pixels) if extra < 1.0 else np.zeros_like(cover, bool)
+        foreign = _foreign(residual, cover, variance, contrast, pixels, float(p[blur_at])) if extra < 1.0 else np.zeros_like(cover, bool)
         weight = trust * ~foreign / (variance * (1.0 + residual**2 / scale / _OUTLIER**2))
         design = np.concatenate([drawn.d_colour - lit * drawn.d_cover, drawn.basis, (1.0 - cover) * scene * tilt])
         scaled = design * weight
@@ -199,8 +198,8 @@ def fit_layer(
         if not np.isfinite(p).all() or float(np.hypot(*(p[:2] - belief.p[:2]))) > reach:
             return None
         if extra == 0.0 and float(np.abs(move[:2]).max()) < _SETTLED_PX:
-            break
-    return _judge(pixels, shape, p, look, shade, prior)
+            return _judge(pixels, shape, p, look, shade, prior, blur_at, drawn)  # as good as drawn at p
+    return _judge(pixels, shape, p, look, shade, prior, blur_at)
 
 
 def _variance(noise2: Floats, drawn: Drawn, contrast: float) -> Floats:
@@ -214,13 +213,18 @@ def _contrast(basis: Floats, look: Floats, scene: Floats, cover: Floats) -> floa
     return float(np.sqrt(((look @ basis - cover * scene) ** 2).sum() / max(float((cover**2).sum()), 1e-9)))
 
 
-def _foreign(residual: Floats, cover: Floats, variance: Floats, contrast: float, pixels: "_Pixels") -> NDArray[np.bool_]:
+@lru_cache(maxsize=32)
+def _round(radius: int) -> NDArray[np.uint8]:
+    return np.asarray(cv2.getStructuringElement(cv2.MORPH_ELLIPSE, (2 * radius + 1, 2 * radius + 1)), dtype=np.uint8)
+
+
+def _foreign(residual: Floats, cover: Floats, variance: Floats, contrast: float, pixels: "_Pixels", soft: float) -> NDArray[np.bool_]:
     """Pixels outside the outline that show something else (the line, a clamp), and their neighbours."""
     odd = (cover < 0.02) & (residual**2 > np.maximum(16 * variance, (_FOREIGN_SHARE * contrast) ** 2))
     if not odd.any():
         return odd
-    near = cv2.dilate(pixels.grid(cover > 0.02), _DISC5)  # its own edge, not quite in place yet
-    grown = cv2.dilate(pixels.grid(odd) & (near == 0), _DISC7)
+    near = cv2.dilate(pixels.grid(cover > 0.02), _round(2))  # its own edge, not quite in place yet
+    grown = cv2.dilate(pixels.grid(odd) & (near == 0), _round(round(2 + 2.5 * soft)))  # back to where half is covered
     return np.asarray(grown.ravel()[pixels.at] > 0)
 
 
@@ -256,16 +260,19 @@ class _Pixels:
         return out
 
 
-def _judge(pixels: _Pixels, shape: Shape, p: Floats, look: Floats, shade: Floats, prior: Floats) -> LayerFit | None:
+def _judge(
+    pixels: _Pixels, shape: Shape, p: Floats, look: Floats, shade: Floats, prior: Floats, blur_at: int,
+    drawn: Drawn | None = None,
+) -> LayerFit | None:
     """Quality and covariance at the solution."""
     seen, scene, tilt = pixels.seen, pixels.scene, pixels.tilt
-    drawn = shape.draw(p, pixels.x, pixels.y, look)
+    drawn = shape.draw(p, pixels.x, pixels.y, look) if drawn is None else drawn
     cover = drawn.basis[0]
     lit = scene * (1.0 + shade @ tilt)
     residual = seen - (1.0 - cover) * lit - look @ drawn.basis
     contrast = _contrast(drawn.basis, look, lit, cover)
     variance = _variance(pixels.noise2, drawn, contrast)
-    foreign = _foreign(residual, cover, variance, contrast, pixels)
+    foreign = _foreign(residual, cover, variance, contrast, pixels, float(p[blur_at]))
     keep = pixels.trust * ~foreign
     agree = keep / (1.0 + residual**2 / variance / _OUTLIER**2)
     design = np.concatenate([drawn.d_colour - lit * drawn.d_cover, drawn.basis, (1.0 - cover) * scene * tilt])

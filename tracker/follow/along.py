@@ -16,10 +16,10 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.linalg import solveh_banded
 from scipy.ndimage import uniform_filter1d
-from scipy.signal import savgol_filter
 from scipy.spatial import cKDTree
 
 from tracker.follow.arc import arc_length
+from tracker.follow.smooth import local_polynomial
 
 __all__ = ["Along", "along_line", "carried_jump", "jitter"]
 
@@ -95,8 +95,7 @@ def along_line(
 def _calm(values: Floats) -> Floats:
     """Smoothed along the line: the noise of a point is in its movement and in the curvature there too, and the
     integral of their product would not vanish."""
-    size = min(_CALM_POINTS, 2 * ((values.size - 1) // 2) + 1)
-    return np.asarray(savgol_filter(values, size, 1, mode="interp")) if size >= 5 else values
+    return local_polynomial(values, _CALM_POINTS // 2, 1)
 
 
 def _rim(metres: Floats, plain: Floats, touched: int) -> tuple[float, float]:

@@ -297,7 +297,9 @@ def _profile(
     usable = counts >= 8
     if usable.sum() < 8:
         return None
-    middle = np.nanmedian(left[usable] if axis == 1 else left[:, usable], axis=axis)
+    ordered = np.sort(left[usable] if axis == 1 else left[:, usable].T, axis=1)  # NaN go last
+    n, line = counts[usable], np.arange(int(usable.sum()))
+    middle = 0.5 * (ordered[line, (n - 1) // 2] + ordered[line, n // 2])
     width = max(3, usable.sum() // 16)
     padded = np.pad(middle, width, mode="edge")
     smooth = np.convolve(padded, np.hanning(2 * width + 1) / np.hanning(2 * width + 1).sum(), mode="valid")

@@ -12,11 +12,11 @@ from typing import Any
 import cv2
 import numpy as np
 from numpy.typing import NDArray
-from scipy.signal import savgol_filter
 
 from tracker.follow.background import Background, Light
 from tracker.follow.path import Path, find_path
 from tracker.follow.profile import ProfilePool, Template, bar_profile, fit_centres
+from tracker.follow.smooth import local_polynomial
 
 __all__ = ["Centreline", "LineFollower", "continuous_ridge"]
 
@@ -283,11 +283,11 @@ class LineFollower:
         self._pool(mean, at[seen], q[seen], normal, half)
         move = np.zeros(points.shape[0])
         if not first:
-            move = _smooth_values(self._predicted_move(index, curve.shape[0]) + shift, 6)
+            move = local_polynomial(self._predicted_move(index, curve.shape[0]) + shift, 6, 1)
         if _turning(points) > _MOST_TURNING:
             return None  # it has begun to zigzag: look again from nothing
         place = points if motion is None else np.asarray(motion.undo(points))  # kept as if the camera had stood still
-        self._curve, self._move = _even_with(place, _smooth_values(move, _CALM_PX))
+        self._curve, self._move = _even_with(place, local_polynomial(move, _CALM_PX, 1))
         exits = bool(
             (points[-1, 0] < 4) | (points[-1, 0] > shape[1] - 5) | (points[-1, 1] < 4) | (points[-1, 1] > shape[0] - 5)
         )
@@ -455,15 +455,7 @@ def _normals(curve: NDArray[np.float64]) -> NDArray[np.float64]:
 
 def _smooth(points: NDArray[np.float64], half_px: float) -> NDArray[np.float64]:
     """Local cubic over points a pixel apart: it takes the roughness out without shortening the bend."""
-    size = 2 * int(half_px) + 1
-    if points.shape[0] <= size:
-        return points
-    return np.asarray(savgol_filter(points, size, 3, axis=0, mode="interp"))
-
-
-def _smooth_values(values: NDArray[np.float64], half: int) -> NDArray[np.float64]:
-    size = min(2 * half + 1, 2 * ((values.size - 1) // 2) + 1)
-    return np.asarray(savgol_filter(values, size, 1, mode="interp")) if size >= 5 else values
+    return points if points.shape[0] <= 2 * int(half_px) + 1 else local_polynomial(points, int(half_px), 3)
 
 
 def _turning(points: NDArray[np.float64]) -> float:

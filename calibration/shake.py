@@ -10,7 +10,7 @@ picture, eight times smaller, by way of patches four times as wide and coarse.
 Only the patches are read, not the picture: a 1080p frame costs less than a millisecond.
 """
 
-from collections.abc import Iterable
+from collections.abc import Iterable, Sequence
 from dataclasses import dataclass, replace
 from typing import Any
 
@@ -18,7 +18,7 @@ import cv2
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-__all__ = ["Motion", "ShakeMeter", "settle"]
+__all__ = ["Motion", "ShakeMeter", "moving_parts", "settle"]
 
 Floats = NDArray[np.float64]
 Gray = NDArray[np.uint8]
@@ -357,6 +357,42 @@ def _fixes(smooth: Gray, row: int, column: int, noise: float) -> bool:
     normal = np.array([[(gx * gx).sum(), (gx * gy).sum()], [(gx * gy).sum(), (gy * gy).sum()]])
     weakest = float(np.linalg.eigvalsh(normal)[0])
     return weakest > (2.0 * noise / 0.25) ** 2
+
+
+def moving_parts(frames: Sequence[Gray], reach_px: int = 24) -> NDArray[np.bool_]:
+    """Where something moves that a moving camera does not explain: no place for the patches of a `ShakeMeter`.
+
+    A hung line that falls carries more texture than a plain wall, and patches on it would agree on its fall. What
+    camera movement does to a pixel is to bring one from its neighbourhood: a value that the neighbourhood did not have
+    has come from elsewhere, and one that the neighbourhood no longer has has gone.
+
+    Parameters
+    ----------
+    frames : sequence of (h, w) uint8 arrays
+        Spread over the clip; the first is the reference.
+    reach_px : int
+        How far the camera may have moved the picture.
+
+    Returns
+    -------
+    (h, w) bool array
+        True where the background must not be trusted, with a margin of a patch.
+    """
+    height, width = frames[0].shape
+    size = (width // 2, height // 2)
+    kernel = np.ones((2 * (reach_px // 2) + 1,) * 2, np.uint8)
+    first = cv2.resize(frames[0], size, interpolation=cv2.INTER_AREA).astype(np.float32)
+    low, high = cv2.erode(first, kernel), cv2.dilate(first, kernel)
+    limit = max(12.0, 6.0 * _noise(np.ascontiguousarray(frames[0])))
+    moved = np.zeros(first.shape, dtype=bool)
+    for frame in frames[1:]:
+        here = cv2.resize(frame, size, interpolation=cv2.INTER_AREA).astype(np.float32)
+        here *= float(np.median(first)) / max(float(np.median(here)), 1.0)  # flicker and exposure
+        moved |= (here > high + limit) | (here < low - limit)
+        moved |= (first > cv2.dilate(here, kernel) + limit) | (first < cv2.erode(here, kernel) - limit)
+    margin = np.ones((2 * PATCH - 1,) * 2, np.uint8)
+    whole = cv2.resize(moved.astype(np.uint8), (width, height), interpolation=cv2.INTER_NEAREST)
+    return np.asarray(cv2.dilate(whole, margin), dtype=bool)
 
 
 def _smaller(gray: Gray) -> NDArray[np.float32]:

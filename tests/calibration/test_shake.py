@@ -6,7 +6,7 @@ import cv2
 import numpy as np
 import pytest
 
-from calibration.shake import Motion, ShakeMeter, settle
+from calibration.shake import Motion, ShakeMeter, moving_parts, settle
 
 cv2.setNumThreads(1)
 HEIGHT, WIDTH = 640, 480
@@ -154,3 +154,23 @@ def test_undo_turns_the_right_way():
     motion = Motion(0.0, 0.0, np.radians(90), 0.01, True, centre=(100.0, 100.0))
     np.testing.assert_allclose(motion.apply([[110.0, 100.0]]), [[100.0, 110.0]], atol=1e-9)  # clockwise as seen
     np.testing.assert_allclose(motion.undo([[100.0, 110.0]]), [[110.0, 100.0]], atol=1e-9)
+
+
+def test_a_hung_line_that_falls_is_no_background(rng: np.random.Generator) -> None:
+    """A ladder of bright rods before a plain wall carries most of the texture; patches on it would agree on its fall."""
+    wall = np.full((640, 480), 120.0)
+    wall[40:600:56, 30:60] = 60.0  # a little furniture that stands still
+    wall[60:620:70, 420:450] = 170.0
+    frames = []
+    for fallen in (0, 0, 30, 90, 200):
+        picture = wall.copy()
+        for rung in range(8):
+            row = 40 + 40 * rung + fallen
+            if row < 620:
+                picture[row : row + 6, 150:330] = 230.0
+        frames.append(np.clip(picture + rng.normal(0, 1.5, picture.shape), 0, 255).astype(np.uint8))
+    told = ShakeMeter(frames[0], moving_parts(frames)).measure(frames[2])
+    assert told.ok and np.hypot(told.dx, told.dy) < 0.05
+    assert not moving_parts(frames)[40:600, 30:60].any()
+    moved = [np.roll(frame, (3 * n, -2 * n), axis=(0, 1)) for n, frame in enumerate(frames[:2])]
+    assert moving_parts(moved).mean() < 0.2  # a camera that moves leaves its background to be trusted

@@ -103,8 +103,9 @@ def evaluate(track: Track, setup: SurfaceDropSetup) -> Evaluation:
     if before_touch is None or setup.length_m is None or setup.drop_height_m is None:
         return _control(track, setup, release, out)
     z_touch = -before_touch
-    touch = setup.touch_s if setup.touch_s is not None else time_at(track, z_touch)
-    if touch is None:
+    seen = time_at(track, z_touch)
+    touch = setup.touch_s if setup.touch_s is not None else seen
+    if touch is None or seen is None:
         reason = "the top end was not followed through the place of first touch"
         names = (
             "effective_acceleration_mps2",
@@ -120,7 +121,7 @@ def evaluate(track: Track, setup: SurfaceDropSetup) -> Evaluation:
     window = setup.window_s or (touch, min(end if end is not None else np.inf, clear_end(track)))
     state = local_state(track, touch)
     at_touch = Estimate(
-        touch, "s", state[2] / max(abs(state[1]), 1e-3) if state else 0.0, np.inf, None,
+        seen, "s", state[2] / max(abs(state[1]), 1e-3) if state else 0.0, np.inf, None,
         "moment at which the fallen distance equals drop height less line length: the lower end touches the surface",
     )  # fmt: skip
     ends = [float(np.interp(t, track.t_s[within(track, window)], track.z_m[within(track, window)])) for t in window]

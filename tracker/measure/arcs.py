@@ -13,7 +13,7 @@ from tracker.analysis.budget import make_quantities
 from tracker.analysis.quantity import Quantity
 from tracker.analysis.tracks import Evaluation, PayoutTrack
 from tracker.follow.payout import PayoutFollow, PayoutFrame, follow_payout
-from tracker.measure.outcome import Outcome, empty_frames, notices_of, predicted, push
+from tracker.measure.outcome import HEADLINE, HEADLINE_WORDS, Outcome, empty_frames, notices_of, predicted, push
 from tracker.measure.stage import Stage
 from tracker.measure.views import InputU, View, causes_of, first_view
 from tracker.progress import Progress
@@ -22,7 +22,6 @@ from tracker.result import FrameMark, Prediction
 __all__ = ["measure_arc"]
 
 Floats = NDArray[np.float64]
-HEADLINE = {"payout": "arc_height_m", "drawn": "line_speed_mps"}
 SCALE_NODES = 40
 
 
@@ -116,7 +115,7 @@ def _refuse_headless(stage: Stage, kind: str, best: Evaluation, follow: PayoutFo
         return
     reason = best.absent.get(HEADLINE[kind], "too little was followed")
     raise CannotMeasure(
-        f"{stage.file.path.name}: no {HEADLINE[kind].rsplit('_', 1)[0].replace('_', ' ')} can be given: {reason}. {follow.speed.basis}",
+        f"{stage.file.path.name}: no {HEADLINE_WORDS[kind]} can be given: {reason}. {follow.speed.basis}",
         "Put tape marks on the line at a known spacing (line.mark_spacing_m), or film faster with a shorter exposure.",
         "headline-absent",
     )

@@ -14,7 +14,7 @@ from tracker.analysis.kinematics import local_state
 from tracker.analysis.quantity import Quantity
 from tracker.analysis.tracks import Evaluation, Track
 from tracker.follow.end import EndFollow, follow_end
-from tracker.measure.outcome import Outcome, empty_frames, notices_of, predicted, push
+from tracker.measure.outcome import HEADLINE, HEADLINE_WORDS, Outcome, empty_frames, notices_of, predicted, push
 from tracker.measure.stage import Stage
 from tracker.measure.views import InputU, View, causes_of, first_view
 from tracker.progress import Progress
@@ -24,14 +24,6 @@ __all__ = ["measure_end"]
 
 Floats = NDArray[np.float64]
 _State = tuple[float, float, float, float]  # place, speed and their standard uncertainties
-HEADLINE = {
-    "free-drop": "measured_gravity_mps2",
-    "surface-drop": "effective_acceleration_mps2",
-    "held-drop": "effective_acceleration_mps2",
-    "edge-slide": "growth_rate_per_s",
-}
-
-
 @dataclass(frozen=True, slots=True)
 class _Fixed:
     """Window and first touch of the best estimate, as places among the frames: shifted views keep them."""
@@ -73,7 +65,7 @@ def measure_end(stage: Stage, tell: Progress) -> Outcome:
     if HEADLINE[kind] not in best.estimates:
         reason = best.absent.get(HEADLINE[kind], "the end does not fall within the clip")
         raise CannotMeasure(
-            f"{stage.file.path.name}: no {HEADLINE[kind].rsplit('_', 1)[0].replace('_', ' ')} can be given: {reason}.",
+            f"{stage.file.path.name}: no {HEADLINE_WORDS[kind]} can be given: {reason}.",
             "Film the whole run, from rest before the release to the end of the fall, with the end in the picture throughout.",
             "headline-absent",
         )

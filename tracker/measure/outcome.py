@@ -14,9 +14,28 @@ from tracker.analysis.tracks import Evaluation, Finding
 from tracker.measure.views import Cause, View
 from tracker.result import FRAME_COLUMNS, FrameMark, Prediction
 
-__all__ = ["Outcome", "empty_frames", "notices_of", "predicted", "push"]
+__all__ = ["HEADLINE", "HEADLINE_WORDS", "Outcome", "empty_frames", "notices_of", "predicted", "push"]
 
 Floats = NDArray[np.float64]
+
+HEADLINE = {
+    "payout": "arc_height_m",
+    "drawn": "line_speed_mps",
+    "free-drop": "measured_gravity_mps2",
+    "surface-drop": "effective_acceleration_mps2",
+    "held-drop": "effective_acceleration_mps2",
+    "edge-slide": "growth_rate_per_s",
+}
+"""What a run of a kind is made for; without it there is no result."""
+
+HEADLINE_WORDS = {
+    "payout": "arc height",
+    "drawn": "line speed",
+    "free-drop": "gravity",
+    "surface-drop": "effective acceleration",
+    "held-drop": "effective acceleration",
+    "edge-slide": "growth rate",
+}
 
 
 @dataclass(frozen=True, slots=True, eq=False)

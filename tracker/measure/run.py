@@ -74,7 +74,7 @@ def _sampled(path: Path, indices: list[int]) -> Sequence[Gray]:
 
 def _result(stage: Stage, outcome: Outcome) -> Result:
     file, clock = stage.file, stage.clock
-    notices = [*stage.notices, *outcome.notices]
+    notices = [*stage.clip.notices, *stage.notices, *outcome.notices]  # a clip's damage shows as it is read
     return Result(
         kind=file.sheet.test.kind,
         sheet=file.sheet.model_dump(mode="json", exclude_none=True) | {"u": _given_us(file)},

@@ -15,7 +15,7 @@ from calibration.clock import Clock, make_clock
 from calibration.lens import Lens
 from calibration.notice import BadInput, CannotMeasure, Notice
 from calibration.plane import Plane, fit_plane
-from calibration.shake import ShakeMeter
+from calibration.shake import ShakeMeter, moving_parts
 from tracker.clip import Clip
 from tracker.follow.background import Background
 from tracker.follow.hints import LineHints
@@ -27,6 +27,13 @@ __all__ = ["Stage", "set_stage"]
 
 SAMPLED_FRAMES = 24
 """Frames from which background and board are taken: a moving line covers any one pixel in few of them."""
+
+NO_BACKGROUND = Notice(
+    "camera-movement-unknown",
+    "The still background has too little structure to tell whether the camera moved.",
+    "A camera that moves by a pixel moves every place by a pixel.",
+    "Use a tripod, and leave something with corners in the picture: a poster, tape crosses on the wall.",
+)
 
 POSSIBLE_FOCAL = (0.35, 6.0)
 """Focal lengths of cameras, in lengths of the picture's longer side: from a phone's widest to a long telephoto."""
@@ -82,13 +89,14 @@ def set_stage(file: SheetFile, clip: Clip, tell: Progress) -> Stage:
     _refuse_points_outside(file, clip)
     tell("background", 0, 0)
     sampled = clip.sample(spread(first, end, SAMPLED_FRAMES))
-    shake = ShakeMeter(sampled[0])
+    shake = ShakeMeter(sampled[0], moving_parts(sampled))
+    unsteady = () if shake.ok else (NO_BACKGROUND,)
     background = Background.from_frames(sampled, [shake.measure(picture) for picture in sampled])
     tell("board", 0, 0)
     find, plane = _plane(file, clip, sampled)
     gravity, u_gravity = local_gravity(file)
     hints = _hints(file, clip, plane, gravity)
-    notices = (*clip.notices, *clock.notices, *(find.notices if find is not None else ()), *plane.notices)
+    notices = (*clock.notices, *(find.notices if find is not None else ()), *plane.notices)
     return Stage(
         file,
         clip,
@@ -102,7 +110,7 @@ def set_stage(file: SheetFile, clip: Clip, tell: Progress) -> Stage:
         u_gravity,
         first,
         end,
-        notices + _card_notice(sheet.test),
+        (*notices, *unsteady, *_card_notice(sheet.test)),
     )
 
 
@@ -127,6 +135,7 @@ def _clock(file: SheetFile, clip: Clip) -> Clock:
             stored_size=(clip.stored_width, clip.stored_height),
             quarter_turns=clip.quarter_turns,
             mirrored=clip.mirrored,
+            name=clip.path.name,
         )
     except BadInput as fault:
         raise BadInput(f"{file.path.name}: {fault.says}", fault.remedy) from None

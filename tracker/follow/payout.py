@@ -32,7 +32,7 @@ Floats = NDArray[np.float64]
 _THIN = 3  # every third point of the axis is kept
 _NODE_PX = 12  # the plane is evaluated this often along the line
 _BLURRED = 0.8  # of a pitch travelled during the exposure: the texture is as good as gone
-_GLIMPSE_FRAMES = 6
+_GLIMPSE_FRAMES = (6, 12)  # a tenth of the clip, but no fewer and no more
 _DOUBT_FRAMES = 15
 _U_RIM_PX = 0.8  # of the rim's crossing along the line in one frame: half a pixel of height where the line is flat
 _U_CARRIED_PX, _U_MOVED = 0.05, 0.4  # of the coordinate carried to the next frame, and per pixel that the line moved
@@ -429,13 +429,14 @@ def _pace_of(doubt_m: Floats, frame_s: Floats) -> Floats:
 
 def _drop_glimpses(kept: list[_Kept]) -> None:
     """What is found in a few frames only is somebody walking by, or a reflection: a line stays."""
+    shortest = int(np.clip(0.1 * len(kept), *_GLIMPSE_FRAMES))
     for what in ("line", "arc"):
         has = [len(k.line_px) > 0 if what == "line" else k.arc is not None for k in kept]
         start = 0
         for i in range(len(kept) + 1):
             if i < len(kept) and has[i] == has[start]:
                 continue
-            if has[start] and i - start < min(_GLIMPSE_FRAMES, len(kept)):
+            if has[start] and i - start < min(shortest, len(kept)):
                 for k in kept[start:i]:
                     k.arc = None
                     if what == "line":

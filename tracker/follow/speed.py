@@ -38,7 +38,8 @@ _U_PLACEMENT = 0.005  # relative, of one mark's place on the line where nothing 
 _ODD_RATIO = 0.06
 _MOST_ACCELERATION = 100.0  # m/s^2
 _POWERS = np.arange(-2.0, 5.01, 0.5)
-_BLOCK_FRAMES, _FOLDS = 12, 4
+_BLOCK_FRAMES, _FOLDS = (4.0, 12.0), 4  # a twentieth of the clip, but no fewer and no more
+_MOST_HEAVIER = 4
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -272,7 +273,9 @@ class _Fit:
 
     def solve(self) -> None:
         """Set up, choose the penalty's weight, solve, and scale the covariance by what the residuals show."""
-        x, y, u, group = self._equations()
+        x, y, u, frame = self._equations()
+        short, long = _BLOCK_FRAMES
+        group = np.floor(frame / np.clip(frame.max() / 20, short, long)).astype(np.intp)
         held_x, held_y, held_u = self._held()
         penalty = np.zeros((x.shape[1], x.shape[1]))
         d = np.diff(np.eye(self.size), n=3, axis=0)
@@ -286,6 +289,10 @@ class _Fit:
             left = (y - x @ answer) / u
             scale = max(1.4826 * float(np.median(np.abs(left))), 1e-3)
             weight = np.minimum(1.0, 2.5 * scale / np.maximum(np.abs(left), 1e-12)) / u**2
+        if frame.max() >= 6 * long:  # errors that neighbours share show over longer stretches only
+            found = self.foretold
+            self._power(x, y, weight, penalty, held_x, held_y, held_u, np.floor(frame / long).astype(np.intp))
+            self.foretold = max(found, self.foretold)
         self.answer = answer
         inverse = cho_solve(normal, np.eye(x.shape[1]))
         dof = max(y.size - float(np.trace(inverse @ (x.T @ (weight[:, None] * x)))), 1.0)
@@ -299,7 +306,8 @@ class _Fit:
         if self.joined is not None:
             self.stretch, self.u_stretch = float(answer[last + 1]), float(np.sqrt(self.cov[last + 1, last + 1]))
 
-    def _equations(self) -> tuple[Floats, Floats, Floats, NDArray[np.intp]]:
+    def _equations(self) -> tuple[Floats, Floats, Floats, Floats]:
+        """Design, right-hand side, u and number of the frame of every observation."""
         r, j = self.rows, self.joined
         pieces = 0 if j is None else int(j.piece.max()) + 1
         width = self.size + self.marks + 2 + pieces
@@ -315,7 +323,7 @@ class _Fit:
             x, y, u = np.concatenate([x, more]), np.concatenate([y, j.length]), np.concatenate([u, j.u])
             t = np.concatenate([t, j.t])
         period = (self.knots[1] - self.knots[0]) / _KNOT_FRAMES
-        return x, y, u, np.floor((t - self.start) / (_BLOCK_FRAMES * period)).astype(np.intp)
+        return x, y, u, np.floor((t - self.start) / period)
 
     def _held(self) -> tuple[Floats, Floats, Floats]:
         """What is known beforehand: S = 0 at the start, the spacing of the marks, ratios near one."""
@@ -389,6 +397,7 @@ class _Fit:
         worse = scores - scores[best]
         error = worse.std(axis=1) * np.sqrt(worse.shape[1])
         chosen = int(np.nonzero(worse.sum(axis=1) <= error)[0].max(initial=best))
+        chosen = min(chosen, best + _MOST_HEAVIER)  # of few stretches the standard error itself is unsure
         told = scores[chosen] > 0
         if told.any():
             self.foretold = float(np.mean(scores[chosen][told] / expected[chosen][told]))

@@ -44,11 +44,16 @@ class _Plane(Protocol):
 
 
 class _Hints(Protocol):
-    origin_px: tuple[float, float]
-    pitch_m: float | None
-    mark_spacing_m: float | None
-    exposure_s: float | None
-    kind: str
+    @property
+    def origin_px(self) -> tuple[float, float]: ...
+    @property
+    def pitch_m(self) -> float | None: ...
+    @property
+    def mark_spacing_m(self) -> float | None: ...
+    @property
+    def exposure_s(self) -> float | None: ...
+    @property
+    def kind(self) -> str: ...
 
 
 @dataclass(frozen=True, slots=True, eq=False)

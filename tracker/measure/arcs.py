@@ -30,8 +30,9 @@ class _Seen:
     """What was followed, as arrays over the frames, still in pixels where that can be."""
 
     frame: NDArray[np.intp]
-    apex_px: Floats  # (n, 2)
-    legs_px: Floats  # (n, 2, 2)
+    apex_px: Floats  # (n, 2), camera movement undone
+    apex_raw_px: Floats  # (n, 2), in the frame itself: its row tells its time
+    legs_px: Floats  # (n, 2, 2), camera movement undone
     u_apex_m: Floats
     radius_m: Floats
     radius_u_m: Floats
@@ -147,8 +148,8 @@ def _input_us(stage: Stage) -> list[InputU]:
 
 def _seen(stage: Stage, follow: PayoutFollow) -> _Seen:
     frames = follow.frames
-    apex = np.array([frame.apex_px for frame in frames], dtype=float).reshape(-1, 2)
-    legs = np.array([frame.legs_px for frame in frames], dtype=float).reshape(-1, 2, 2)
+    apex = np.array([frame.apex_plane_px for frame in frames], dtype=float).reshape(-1, 2)
+    legs = np.array([frame.legs_plane_px for frame in frames], dtype=float).reshape(-1, 2, 2)
     with_line = [frame for frame in frames if np.isfinite(frame.line_px).all(axis=1).sum() > SCALE_NODES]
     reference = np.zeros((0, 2))
     if with_line:
@@ -158,6 +159,7 @@ def _seen(stage: Stage, follow: PayoutFollow) -> _Seen:
     return _Seen(
         frame=np.array([frame.frame for frame in frames], dtype=np.intp),
         apex_px=apex,
+        apex_raw_px=np.array([frame.apex_px for frame in frames], dtype=float).reshape(-1, 2),
         legs_px=legs,
         u_apex_m=np.array([frame.u_apex_m for frame in frames]),
         radius_m=np.array([frame.radius_m for frame in frames]),
@@ -189,7 +191,7 @@ def _track(seen: _Seen, follow: PayoutFollow, view: View, nominal: View) -> Payo
     phase = np.linspace(-1.0, 1.0, seen.frame.size)
     apex = plane.to_metres(view.nudge.applied(seen.apex_px, phase))
     legs = plane.to_metres(seen.legs_px)
-    times = clock.at(seen.frame, seen.apex_px)
+    times = clock.at(seen.frame, seen.apex_raw_px)
     missing = ~np.isfinite(times)
     times[missing] = clock.at(seen.frame[missing], np.broadcast_to(plane.origin_px, (int(missing.sum()), 2)))
     stretch = 1.0

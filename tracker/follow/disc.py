@@ -28,6 +28,7 @@ _STEP = 1.5  # how far apart the moments may lie of which an exposure is made up
 _MOST_STEPS = 24
 _SHORT = 0.5  # of the radius: a way over which the look changes little
 _SLOPE, _BEND = 0.3, 0.15
+_AGREE, _CRESCENT = 0.8, 0.06
 _LIMB = 0.25  # the shading's slope is unbounded where a ball's surface turns away; it is cut off here
 
 
@@ -74,7 +75,12 @@ def look_spread(looks: int, level: float) -> Floats:
     """
     sigma = np.array([1.0, _SLOPE, _SLOPE, _SLOPE, _BEND, _BEND, _BEND, _BEND, _BEND])[:looks] * max(level, 1.0)
     sigma[0] = 200.0  # any grey level
-    return np.asarray(np.diag(sigma**2))
+    cov = np.diag(sigma**2)
+    for i, j in ((1, 5), (2, 6)) if looks == 9 else ():
+        # a lamp in front puts both on one side: opposite signs would draw a crescent along the limb, which no lamp does
+        cov[i, j] = cov[j, i] = _AGREE * cov[i, i]
+        cov[j, j] = _AGREE**2 * cov[i, i] + (_CRESCENT * max(level, 1.0)) ** 2
+    return np.asarray(cov)
 
 
 @dataclass(frozen=True, slots=True, eq=False)

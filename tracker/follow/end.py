@@ -26,11 +26,13 @@ __all__ = ["EndFollow", "follow_end"]
 Floats = NDArray[np.float64]
 
 _LINE_M = 0.004  # width of a line whose end carries no mark, to begin with [m]
+_HALF_HIDDEN = 0.85  # of the usual share of the outline
 _IN_A_ROW = 3  # frames that must agree before a mark that was lost counts as found
 _PATIENCE = 12  # frames searched within reach of the last place; afterwards the whole picture, now and then
 _EVERY = 4
 _DOUBTED = 16  # frames in which other models of the look are tried
-_FLOOR_PX = 0.05  # of the steady offset's u: compression, sharpening, pixels
+_FLOOR_PX = 0.10  # of the steady offset's u: compression, sharpening, pixels
+_LEAST_TOLD = 0.5  # scatter may lower the fits' own u (which counts on an imperfect look) by this much at most
 _SCATTER_REACH = 4  # frames to either side for the local cubic
 
 
@@ -102,6 +104,7 @@ class _Kept:
     diameter: float = np.nan
     light: Floats = field(default_factory=lambda: np.full(2, np.nan))
     doubt: Floats | None = None
+    whole: float = np.nan
     found: bool = False  # after a loss
     flags: list[str] = field(default_factory=list)
 
@@ -199,7 +202,7 @@ class _Follower:
         self.course.add(float(self.clock.at(index, sight.px)), px)
         u_motion = 0.0 if motion is None or not np.isfinite(motion.u_px) else float(motion.u_px)
         kept.raw, kept.px, kept.u = sight.px, px, np.hypot(sight.u_px, u_motion)
-        kept.diameter, kept.light, kept.found = sight.diameter_px, sight.light_px, self.lost > 0
+        kept.diameter, kept.light, kept.whole, kept.found = sight.diameter_px, sight.light_px, sight.whole, self.lost > 0
         if self.last_sight < 0 or index - self.last_sight >= max(2, len(self.clock.frame_s) // _DOUBTED):
             velocity = self.course.at(self.course.t_s[-1])[1]
             kept.doubt, self.last_sight = self.eye.doubt(view, sight, velocity, self.way_s), index
@@ -278,14 +281,17 @@ class _Follower:
     # --- the clip -----------------------------------------------------------------------------------------------
 
     def result(self) -> EndFollow:
+        if getattr(self.eye, "burnt", None) is not None:
+            _drop_scenery(self.kept, self.eye.size_px)
         _drop_short_finds(self.kept)
+        _drop_half_hidden(self.kept)
         frame = np.array([k.frame for k in self.kept], dtype=np.int64)
         px, raw = _stacked([k.px for k in self.kept]), _stacked([k.raw for k in self.kept])
         u_xy = _stacked([k.u for k in self.kept])
-        seen = np.isfinite(px).all(axis=1)
+        seen = np.asarray(np.isfinite(px).all(axis=1))
         t = np.full(len(frame), np.nan)
         t[seen] = self.clock.at(frame[seen], raw[seen])
-        u_xy = u_xy * _more_than_told(t, px, u_xy)
+        u_xy = u_xy * _scatter_over_told(t, px, u_xy)
         speed = _speeds(t, px)
         self._say_rest(px, speed)
         light = _stacked([k.light for k in self.kept])[seen]
@@ -301,7 +307,7 @@ class _Follower:
 
     def _say_rest(self, px: Floats, speed: Floats) -> None:
         """Flag the frames before the release and those in which it has come to rest below."""
-        seen = np.isfinite(px).all(axis=1)
+        seen = np.asarray(np.isfinite(px).all(axis=1))
         if not seen.any():
             return
         fallen = px[:, 1] - px[seen][0, 1]
@@ -317,6 +323,15 @@ class _Follower:
 
     def _notices(self, seen: NDArray[np.bool_], bias: float) -> tuple[Notice, ...]:
         found: list[Notice] = []
+        if not seen.any() and self.kept:
+            found.append(
+                Notice(
+                    "end-not-found",
+                    f"No end like that of the sheet is near column {self.origin[0]:.0f}, row {self.origin[1]:.0f}.",
+                    "Nothing is measured.",
+                    "Check datum.origin_px (the centre of the mark while it hangs) and line.end_mark_m (its diameter).",
+                )
+            )
         burnt = getattr(self.eye, "burnt", None)
         if burnt is not None:
             found.append(
@@ -370,12 +385,34 @@ def _drop_short_finds(kept: list[_Kept]) -> None:
         i = end
 
 
+def _drop_scenery(kept: list[_Kept], size_px: float) -> None:
+    """Leave all empty if what looked like the end is in the background and never went away: it is part of the scene."""
+    px = _stacked([k.px for k in kept])
+    if np.isfinite(px).any() and not (np.hypot(*(px - px[np.isfinite(px[:, 0])][0]).T) > 0.5 * size_px).any():
+        kept[:] = [_Kept(k.frame, flags=[*k.flags, "end-not-found"]) for k in kept]
+
+
+def _drop_half_hidden(kept: list[_Kept]) -> None:
+    """Leave empty the frames next to a loss in which less of the outline was seen than usual: something covers it already."""
+    whole = np.array([k.whole for k in kept])
+    if not np.isfinite(whole).any():
+        return
+    usual = float(np.nanmedian(whole))
+    hidden = [bool({"end-hidden", "end-lost"} & set(k.flags)) for k in kept]
+    for step in (1, -1):
+        for i in range(len(kept)) if step > 0 else range(len(kept) - 1, -1, -1):
+            before = i - step
+            if 0 <= before < len(kept) and hidden[before] and whole[i] < _HALF_HIDDEN * usual:
+                kept[i] = _Kept(kept[i].frame, flags=[*kept[i].flags, "end-hidden"])
+                hidden[i] = True
+
+
 def _emptied(kept: _Kept) -> _Kept:
     return _Kept(kept.frame, flags=[*kept.flags, "end-lost"])
 
 
-def _more_than_told(t: Floats, px: Floats, u: Floats) -> Floats:
-    """Scatter of the places about local cubics over their own uncertainty, per coordinate, 1 or more: (2,).
+def _scatter_over_told(t: Floats, px: Floats, u: Floats) -> Floats:
+    """Scatter of the places about local cubics over their own uncertainty, per coordinate: (2,).
 
     Each place is held against the cubic through its neighbours, itself left out. The median over the clip does not
     notice the few frames in which a whip is no cubic.
@@ -393,7 +430,7 @@ def _more_than_told(t: Floats, px: Floats, u: Floats) -> Floats:
         ratios.append(np.abs(left) / np.sqrt(max(1 - hat[reach, reach], 1e-9)) / np.maximum(u[i], 1e-6))
     if len(ratios) < 8:
         return np.ones(2)
-    return np.maximum(1.4826 * np.median(np.array(ratios), axis=0), 1.0)
+    return np.maximum(1.4826 * np.median(np.array(ratios), axis=0), _LEAST_TOLD)
 
 
 def _speeds(t: Floats, px: Floats) -> Floats:

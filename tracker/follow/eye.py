@@ -24,6 +24,7 @@ _SOFT_KEPT = 0.08  # how much it may change from frame to frame, relative
 _GRID = 40  # the light of a frame is read off about so many columns and rows
 _SURE_PX = 1.2  # a place foretold closer than this is a good enough start
 _PLAIN_EDGE, _PLAIN_MISFIT = 0.6, 1.8  # of a fit that is plainly right
+_RIVAL = 1.05  # times the least cost: such a fit might as well be the right one
 _USUAL = 0.1  # weight of it in each frame
 _SEEK_MOST = 5  # candidates looked at closely
 
@@ -79,6 +80,8 @@ class Sight:
         Centre of brightness minus centre of the outline.
     quality : float
         0 to 1.
+    whole : float
+        Share of the outline that was seen and agreed.
     keep : object
         What the eye remembers when this sight is accepted.
     """
@@ -88,13 +91,15 @@ class Sight:
     diameter_px: float
     light_px: Floats
     quality: float
+    whole: float
     keep: Any
 
 
 class Eye(Protocol):
     """A way of seeing an end."""
 
-    size_px: float
+    @property
+    def size_px(self) -> float: ...
 
     def first(self, view: View, near: Floats) -> Sight | None: ...
     def near(self, view: View, place: Floats, velocity: Floats, gate_px: float, way_s: float) -> Sight | None: ...
@@ -108,6 +113,14 @@ def _region(centre: Floats, half: float, shape: tuple[int, ...]) -> Region | Non
     x0, x1 = max(0, int(np.floor(centre[0] - half))), min(shape[1], int(np.ceil(centre[0] + half)) + 1)
     y0, y1 = max(0, int(np.floor(centre[1] - half))), min(shape[0], int(np.ceil(centre[1] + half)) + 1)
     return (x0, y0, x1, y1) if x1 - x0 >= 4 and y1 - y0 >= 4 else None
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class _Settled:
+    """The best fit, and how far others lie from it that are nearly as good [px]: where things overlap there are several."""
+
+    fit: LayerFit
+    spread: Floats
 
 
 @dataclass(slots=True, eq=False)
@@ -169,7 +182,7 @@ class DiscEye:
                     best, cost = fit, fit.cost
         if best is None or float(np.hypot(*(best.p[:2] - near))) > reach:
             return None
-        return self._sight(best, view, patch, np.zeros(2)) if self._good(best, patch, None, view.gray.shape) else None
+        return self._sight(best, view, np.zeros(2)) if self._good(best, patch, None, view.gray.shape) else None
 
     def near(self, view: View, place: Floats, velocity: Floats, gate_px: float, way_s: float) -> Sight | None:
         """The mark close to where it is expected."""
@@ -178,16 +191,16 @@ class DiscEye:
         starts = [place]
         if gate_px > _SURE_PX:  # not foretold closely enough to begin there
             starts = self._candidates(view, place, min(gate_px, 3 * self.size_px), way)[:2] or starts
-        best: tuple[LayerFit, Patch] | None = None
+        best: _Settled | None = None
         for start in starts:
             found = self._settle(view, start, velocity, way, min(gate_px, _SURE_PX))
-            if found is not None and (best is None or found[0].explained > best[0].explained):
+            if found is not None and (best is None or found.fit.explained > best.fit.explained):
                 best = found
-        if best is None or float(np.hypot(*(best[0].p[:2] - place))) > max(3 * gate_px, self.radius):
+        if best is None or float(np.hypot(*(best.fit.p[:2] - place))) > max(3 * gate_px, self.radius):
             return None
-        return self._sight(best[0], view, best[1], velocity)
+        return self._sight(best.fit, view, best.spread)
 
-    def _settle(self, view: View, start: Floats, velocity: Floats, way: Floats, gate: float) -> tuple[LayerFit, Patch] | None:
+    def _settle(self, view: View, start: Floats, velocity: Floats, way: Floats, gate: float) -> "_Settled | None":
         """The best fit from one start, and its patch; from all around it, where the first try is not plainly right."""
         patch = self._patch(view, start, 1.08 * self.radius + 4 + gate + 0.5 * float(np.hypot(*way)))
         if patch is None:
@@ -195,14 +208,20 @@ class DiscEye:
         disc, belief = self._disc(view, start, velocity), self._expected(view, start, way, gate)
         reach = 0.5 * self.radius + 2 + gate
         fit = fit_layer(patch, disc, belief, soften=(0.4, 0.0, 0.0), reach=reach)
+        tried = [] if fit is None else [fit]
         if fit is None or not self._good(fit, patch, belief, view.gray.shape) or fit.edge < _PLAIN_EDGE or fit.misfit > _PLAIN_MISFIT:
             for other_start in _starts(start if fit is None else fit.p[:2], min(0.6 * self.radius, 4.0)):
                 p = belief.p.copy()
                 p[:2] = other_start
                 other = fit_layer(patch, disc, replace(belief, p=p), soften=(0.7, 0.3, 0.0, 0.0, 0.0), reach=reach)
-                if other is not None and (fit is None or other.cost < fit.cost):
-                    fit = other
-        return None if fit is None or not self._good(fit, patch, belief, view.gray.shape) else (fit, patch)
+                if other is not None:
+                    tried.append(other)
+        tried = [one for one in tried if self._good(one, patch, belief, view.gray.shape)]
+        if not tried:
+            return None
+        best = min(tried, key=lambda one: one.cost)
+        rivals = np.array([one.p[:2] for one in tried if one.cost < _RIVAL * best.cost])
+        return _Settled(best, np.sqrt(((rivals - best.p[:2]) ** 2).mean(axis=0)))
 
     def seek(self, view: View, place: Floats, last: Floats, since_s: float, reach_px: float, way_s: float) -> list[Sight]:
         """All that look like the mark within reach, best first."""
@@ -213,7 +232,7 @@ class DiscEye:
             way = velocity * way_s
             one = self._settle(view, start, velocity, way, float(np.hypot(*way)) + 2.0)
             if one is not None:
-                found.append(self._sight(one[0], view, one[1], velocity))
+                found.append(self._sight(one.fit, view, one.spread))
         found.sort(key=lambda sight: -sight.quality)
         apart: list[Sight] = []
         for sight in found:
@@ -287,19 +306,23 @@ class DiscEye:
         if max(fit.p_cov[0, 0], fit.p_cov[1, 1]) > (0.2 * self.radius) ** 2:
             return False
         noise = float(np.median(patch.sigma))
-        if fit.contrast < 3.0 * noise or not (fit.explained > 0.6 or fit.misfit < 2.0):
+        if fit.contrast < 3.0 * noise:
             return False
-        if belief is None:
-            return True
+        if belief is None:  # nothing is known yet: only what is plainly a disc
+            return fit.misfit < 2.5 and fit.explained > 0.75 and (self.burnt is None or (fit.misfit < 1.8 and fit.edge > 0.6))
+        if not (fit.explained > 0.85 or (fit.misfit < 2.0 and fit.explained > 0.5)):
+            return False
         return _look_differs(fit.look, belief.look) < 0.2 * max(abs(float(belief.look[0])), fit.contrast) + 6 * noise
 
-    def _sight(self, fit: LayerFit, view: View, patch: Patch, velocity: Floats) -> Sight:
+    def _sight(self, fit: LayerFit, view: View, spread: Floats) -> Sight:
         h, w = view.gray.shape
         from_middle = fit.p[:2] - np.array([(w - 1) / 2, (h - 1) / 2])
         squeeze = (self.radius / self.focal_px) ** 2  # a sphere's outline is centred a little farther out than its centre
+        told = np.sqrt(np.diag(fit.p_cov)[:2]) * max(fit.misfit, 1.0) / np.sqrt(fit.edge)
         return Sight(
-            px=fit.p[:2] - squeeze * from_middle, u_px=np.sqrt(np.diag(fit.p_cov)[:2]) * max(fit.misfit, 1.0) / np.sqrt(fit.edge), diameter_px=2 * float(fit.p[RADIUS]),
-            light_px=_light_shift(fit, self.radius), quality=fit.cover * max(fit.explained, 0.0), keep=fit,
+            px=fit.p[:2] - squeeze * from_middle, u_px=np.hypot(told, spread), diameter_px=2 * float(fit.p[RADIUS]),
+            light_px=_light_shift(fit, self.radius), quality=fit.cover * max(fit.explained, 0.0),
+            whole=min(fit.cover, fit.edge), keep=fit,
         )  # fmt: skip
 
     def doubt(self, view: View, sight: Sight, velocity: Floats, way_s: float) -> Floats:
@@ -493,4 +516,7 @@ class TipEye:
         )  # fmt: skip
         if fit is None:
             return None
-        return Sight(fit.point, np.sqrt(np.diag(fit.cov)), fit.width_px, fit.bias_px * fit.direction, fit.explains, (fit.width_px, fit.contrast))
+        return Sight(
+            px=fit.point, u_px=np.sqrt(np.diag(fit.cov)), diameter_px=fit.width_px, light_px=fit.bias_px * fit.direction,
+            quality=fit.explains, whole=1.0, keep=(fit.width_px, fit.contrast),
+        )  # fmt: skip

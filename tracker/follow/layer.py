@@ -35,8 +35,15 @@ _SCENE_SIGMA = 0.05  # by how much shadows may dim the scene behind, and how une
 class Shape(Protocol):
     """An outline with a look."""
 
-    parameters: int  # how many; the first two are column and row of its place
-    looks: int  # how many functions its look is made of; the first is 1
+    @property
+    def parameters(self) -> int:
+        """How many; the first two are column and row of its place."""
+        ...
+
+    @property
+    def looks(self) -> int:
+        """Of how many functions its look is made; the first is 1."""
+        ...
 
     def draw(self, p: Floats, x: Floats, y: Floats, look: Floats) -> "Drawn": ...
 
@@ -273,11 +280,10 @@ def _judge(
     contrast = _contrast(drawn.basis, look, lit, cover)
     variance = _variance(pixels.noise2, drawn, contrast)
     foreign = _foreign(residual, cover, variance, contrast, pixels, float(p[blur_at]))
-    keep = pixels.trust * ~foreign
-    agree = keep / (1.0 + residual**2 / variance / _OUTLIER**2)
+    agree = ~foreign / (1.0 + residual**2 / variance / _OUTLIER**2)
     design = np.concatenate([drawn.d_colour - lit * drawn.d_cover, drawn.basis, (1.0 - cover) * scene * tilt])
     try:
-        cov = np.linalg.inv((design * (agree / variance)) @ design.T + prior)
+        cov = np.linalg.inv((design * (pixels.trust * agree / variance)) @ design.T + prior)
     except np.linalg.LinAlgError:
         return None
     inside = cover > 0.5

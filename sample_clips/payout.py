@@ -358,22 +358,20 @@ class Drawing:
     def strand(self, t: float) -> Strand:
         """The line at one moment: up from the pile, round the lip, straight to the winch, with its waves."""
         lip = 0.008  # radius of the bend over the lip
-        turn = np.pi / 2 - np.arctan(self.rise)
-        corner = np.array([self.rim_radius_m + 0.002 - lip, 0.0])
-        up = np.arange(-self.pile_m - 0.04, 0.0, _POINT_M)
-        angle = np.arange(0.0, turn, _POINT_M / lip)
-        run = np.arange(0.0, self.reach_m, _POINT_M)
-        bend = corner + lip * np.stack([1 - np.cos(angle), np.sin(angle)], axis=1)
-        end = corner + lip * np.array([1 - np.cos(turn), np.sin(turn)])
+        lean, turn = 0.45, np.pi / 2 - np.arctan(self.rise)  # of the way from upright: off the pile, and on the run
+        corner = np.array([self.rim_radius_m + 0.001 - lip * np.cos(lean), 0.0])
+        up = np.arange(-(self.pile_m + 0.03) / np.cos(lean), 0.0, _POINT_M)
+        angle = np.append(np.arange(lean, turn, _POINT_M / lip), turn)
+        run = np.arange(_POINT_M, self.reach_m, _POINT_M)
+        bend = corner + lip * np.stack([np.cos(lean) - np.cos(angle), np.sin(angle) - np.sin(lean)], axis=1)
+        end = bend[-1]
         ahead = np.array([1.0, self.rise]) / np.hypot(1.0, self.rise)
         still = run * 0 + (1 - np.exp(-((run / 0.05) ** 2)))  # held at the lip
         since = max(t, 0.0)
         across = sum((r.across(run, since) for r in self.ripples), np.zeros_like(run)) * still
         straight = end + run[:, None] * ahead + across[:, None] * np.array([-ahead[1], ahead[0]])
-        plane = np.vstack([np.stack([np.full(up.size, corner[0]), up], axis=1), bend, straight])
-        keep = np.r_[True, np.linalg.norm(np.diff(plane, axis=0), axis=1) > 1e-9]
-        plane = plane[keep]
+        plane = np.vstack([corner + up[:, None] * np.array([np.sin(lean), np.cos(lean)]), bend, straight])
         length = np.r_[0.0, np.cumsum(np.linalg.norm(np.diff(plane, axis=0), axis=1))]
-        sigma = length - np.interp(0.0, plane[: up.size + 2, 1], length[: up.size + 2])
+        sigma = length - length[up.size]  # the bend begins at the rim's height
         points = np.stack([plane[:, 0], np.zeros(len(plane)), plane[:, 1]], axis=1)
         return Strand(points, self.paid_out(t) - sigma, np.ones(len(points), dtype=bool))

@@ -301,23 +301,23 @@ def test_time_grows_no_faster_than_the_points(rng):
         points = rng.uniform([0, 0], SIZE, (count, 2))
         every = []
         for _ in range(5):
-            start = time.perf_counter()
+            start = time.process_time()
             plane.to_metres(points)
-            every.append(time.perf_counter() - start)
+            every.append(time.process_time() - start)
         return min(every)
 
-    assert seconds(100_000) < 40 * seconds(10_000)  # ten times the points; a square law would be a hundred
+    assert seconds(200_000) < 9 * seconds(50_000)  # four times the points; a square law would be sixteen
 
 
 def test_95_percent_intervals_hold_the_truth():
-    """150 random stations; the full study is `python -m tests.studies.plane_coverage`."""
-    cases = study(150, seed=7)
+    """60 random stations; the full study is `python -m tests.studies.plane_coverage`."""
+    cases = study(60, seed=7)
     z = np.array([(case.measured - case.true) / case.u for case in cases])
     inside = np.abs(z).reshape(-1, 4)[:, 0] < 1.96  # one length a station: those are independent
     low, high = stats.binom.ppf([0.001, 0.999], len(inside), 0.95)
     assert low <= inside.sum() <= high
     assert 0.85 < np.sqrt((z**2).mean()) < 1.15
-    assert abs(np.mean([case.measured / case.true - 1 for case in cases])) < 4 * 0.0065 / np.sqrt(150)
+    assert abs(np.mean([case.measured / case.true - 1 for case in cases])) < 4 * 0.0065 / np.sqrt(60)
 
 
 def test_a_plane_checks_its_parameters():

@@ -52,8 +52,8 @@ class Course:
         px = np.array(self.px[-count:])
         degree = min(degree, len(t) - 1)
         span = max(float(t[-1] - t[0]), 1e-6)
-        basis = np.vander((t - t[-1]) / span, degree + 1, increasing=True)
-        c = np.linalg.lstsq(basis, px, rcond=None)[0]
+        basis = ((t - t[-1]) / span)[:, None] ** np.arange(degree + 1)
+        c = np.linalg.solve(basis.T @ basis, basis.T @ px)  # two or three unknowns, times scaled: well conditioned
         ahead = (t_s - t[-1]) / span
         powers = ahead ** np.arange(degree + 1)
         rates = np.arange(degree + 1) * np.concatenate([[0.0], powers[:-1]]) / span

@@ -17,7 +17,7 @@ from calibration.clock import Clock
 from calibration.notice import Notice
 from tracker.follow.background import Background
 from tracker.follow.course import Course
-from tracker.follow.eye import DiscEye, Eye, Sight, TipEye, View
+from tracker.follow.eye import U_RADIUS, DiscEye, Eye, Sight, TipEye, View, blob_size
 from tracker.follow.hints import LineHints
 from tracker.follow.tip import LineEnd
 
@@ -27,10 +27,12 @@ Floats = NDArray[np.float64]
 
 _LINE_M = 0.004  # width of a line whose end carries no mark, to begin with [m]
 _HALF_HIDDEN = 0.85  # of the usual share of the outline
+_LARGEST_M = 0.15  # half of a window in which a dropped object of untold size is looked for [m]
+_U_GUESSED = 0.06  # relative, of such a size
 _IN_A_ROW = 3  # frames that must agree before a mark that was lost counts as found
 _PATIENCE = 12  # frames searched within reach of the last place; afterwards the whole picture, now and then
 _EVERY = 4
-_DOUBTED = 16  # frames in which other models of the look are tried
+_DOUBTED = 12  # frames in which other models of the look are tried
 _FLOOR_PX = 0.10  # of the steady offset's u: compression, sharpening, pixels
 _LEAST_TOLD = 0.5  # scatter may lower the fits' own u (which counts on an imperfect look) by this much at most
 _SCATTER_REACH = 4  # frames to either side for the local cubic
@@ -163,22 +165,36 @@ class _Follower:
         self.origin = np.asarray(hints.origin_px, dtype=float)
         self.period = clock.period_s
         self.way_s = hints.exposure_s if hints.exposure_s is not None else 0.25 * self.period
-        self.eye: Eye = self._make_eye(plane)
+        self.plane = plane
+        self.eye: Eye | None = None
+        if hints.end_mark_px is not None:
+            self.eye = self._disc_eye(max(float(hints.end_mark_px), 1.5))
         self.course = Course()
         self.kept: list[_Kept] = []
         self.lost = 0  # frames since the end was last seen
         self.gone = False
         self.last_sight = -1
+        self.unfound = 0  # frames in which it was not found at first
+        self.guessed_size: float | None = None
 
-    def _make_eye(self, plane: _Plane) -> Eye:
-        if self.hints.end_mark_px is None:
-            return TipEye(self.background, LineEnd(max(_LINE_M * self.hints.px_per_m, 1.5)))
-        distance = getattr(plane, "distance_m", None)
+    def _disc_eye(self, size: float, u_size: float = U_RADIUS) -> DiscEye:
+        distance = getattr(self.plane, "distance_m", None)
         focal = float(distance) * self.hints.px_per_m if distance is not None else np.inf
         at = self.clock.at(0, np.array([[0.0, 0.0], [1.0, 0.0], [0.0, 1.0]]))
-        size = max(float(self.hints.end_mark_px), 1.5)
         u_way = 0.15 if self.hints.exposure_s is not None else 0.6
-        return DiscEye(self.background, size, focal, np.array([at[1] - at[0], at[2] - at[0]]), u_way=u_way)
+        slope = np.array([at[1] - at[0], at[2] - at[0]])
+        return DiscEye(
+            self.background, size, focal, slope, u_size=u_size, u_way=u_way, may_be_burnt=self.hints.kind != "edge-slide"
+        )
+
+    def _eye_without_size(self, view: View) -> Eye:
+        """A dropped object of untold size is looked at; otherwise the end is that of a bare line."""
+        if self.hints.kind == "free-drop":
+            size = blob_size(self.background, view, view.to_frame(self.origin), _LARGEST_M * self.hints.px_per_m)
+            if size is not None:
+                self.guessed_size = size
+                return self._disc_eye(size, _U_GUESSED)
+        return TipEye(self.background, LineEnd(max(_LINE_M * self.hints.px_per_m, 1.5)))
 
     # --- one frame ----------------------------------------------------------------------------------------------
 
@@ -193,7 +209,9 @@ class _Follower:
             if not motion.ok or motion.still:
                 motion = None
         view = View.of(gray, self.background.gray, motion)
-        sight = self._look(index, view, kept)
+        if self.eye is None:
+            self.eye = self._eye_without_size(view)
+        sight = self._look(self.eye, index, view, kept)
         if sight is None:
             self.lost += 1
             return
@@ -208,9 +226,9 @@ class _Follower:
             kept.doubt, self.last_sight = self.eye.doubt(view, sight, velocity, self.way_s), index
         self.lost = 0
 
-    def _look(self, index: int, view: View, kept: _Kept) -> Sight | None:
+    def _look(self, eye: Eye, index: int, view: View, kept: _Kept) -> Sight | None:
         if not self.course.t_s:
-            sight = self.eye.first(view, view.to_frame(self.origin))
+            sight = self._first(eye, view)
             if sight is None:
                 kept.flags.append("end-not-found")
             return sight
@@ -226,33 +244,43 @@ class _Follower:
             kept.flags.append("end-out-of-picture")
             return None
         if self.lost < 3:
-            sight = self.eye.near(view, at, velocity, gate, self.way_s) if not outside else None
+            sight = eye.near(view, at, velocity, gate, self.way_s) if not outside else None
             if sight is not None and self._inside(sight, view):
                 return sight
-        if self._leaves(at, velocity, outside, view):
+        if self._leaves(at, velocity, outside, view, eye.size_px):
             self.gone = self.hints.kind in ("free-drop", "surface-drop", "edge-slide")
             kept.flags.append("end-out-of-picture")
             return None
-        return self._seek(index, view, t, at, velocity, gate, kept)
+        return self._seek(eye, view, t, at, velocity, gate, kept)
 
     def _inside(self, sight: Sight, view: View) -> bool:
         h, w = view.gray.shape
         return bool(0 <= sight.px[0] <= w - 1 and 0 <= sight.px[1] <= h - 1)
 
-    def _leaves(self, at: Floats, velocity: Floats, outside: bool, view: View) -> bool:
+    def _leaves(self, at: Floats, velocity: Floats, outside: bool, view: View, size: float) -> bool:
         """It was moving out of the picture and is at its border, or beyond."""
         if outside:
             return True
         h, w = view.gray.shape
-        ahead = at + np.sign(velocity) * 0.6 * self.eye.size_px
+        ahead = at + np.sign(velocity) * 0.6 * size
         fast = float(np.hypot(*velocity)) * self.period > 1.0
         return fast and bool((ahead < 0).any() or ahead[0] > w - 1 or ahead[1] > h - 1)
 
+    def _first(self, eye: Eye, view: View) -> Sight | None:
+        """The end at its origin; anywhere, when the clip begins after the release or the origin is a table's edge."""
+        sight = eye.first(view, view.to_frame(self.origin))
+        self.unfound += sight is None
+        elsewhere = self.hints.kind == "edge-slide" or self.kept[0].frame > self.hints.origin_frame
+        if sight is not None or not elsewhere or not isinstance(eye, DiscEye) or self.unfound % _EVERY != 1:
+            return sight
+        found = [s for s in (eye.first(view, place) for place in eye.search(view)) if s is not None]
+        return max(found, key=lambda s: float(s.px[1])) if found else None
+
     def _seek(
-        self, index: int, view: View, t: float, at: Floats, velocity: Floats, gate: float, kept: _Kept
+        self, eye: Eye, view: View, t: float, at: Floats, velocity: Floats, gate: float, kept: _Kept
     ) -> Sight | None:
         """Search around, farther out the longer it has not been seen."""
-        size, last = self.eye.size_px, view.to_frame(self.course.px[-1])
+        size, last = eye.size_px, view.to_frame(self.course.px[-1])
         since = t - self.course.t_s[-1]
         if self.lost < _PATIENCE:
             step = float(np.hypot(*velocity)) * since
@@ -265,7 +293,7 @@ class _Follower:
         else:
             kept.flags.append("end-lost")
             return None
-        found = [s for s in self.eye.seek(view, middle, last, since, reach, self.way_s) if self._inside(s, view)]
+        found = [s for s in eye.seek(view, middle, last, since, reach, self.way_s) if self._inside(s, view)]
         if not found:
             kept.flags.append("end-hidden" if self.lost < 3 else "end-lost")
             return None
@@ -281,7 +309,7 @@ class _Follower:
     # --- the clip -----------------------------------------------------------------------------------------------
 
     def result(self) -> EndFollow:
-        if getattr(self.eye, "burnt", None) is not None:
+        if isinstance(self.eye, DiscEye) and self.eye.burnt is not None:
             _drop_scenery(self.kept, self.eye.size_px)
         _drop_short_finds(self.kept)
         _drop_half_hidden(self.kept)
@@ -297,7 +325,7 @@ class _Follower:
         light = _stacked([k.light for k in self.kept])[seen]
         doubts = [k.doubt for k in self.kept if k.doubt is not None and np.isfinite(k.px).all()]
         bias, wander, mean_light = _doubt(light, np.array(doubts).reshape(-1, 2, 2))
-        if self.hints.end_mark_px is None and light.size:  # a bare tip: how the end is cut is not known
+        if isinstance(self.eye, TipEye) and light.size:  # a bare tip: how the end is cut is not known
             bias = float(np.hypot(bias, np.mean(np.hypot(light[:, 0], light[:, 1]))))
         return EndFollow(
             frame=frame, px=px, raw_px=raw, u_px=np.sqrt((u_xy**2).mean(axis=1)), u_xy_px=u_xy, t_s=t, speed_px_s=speed,
@@ -332,8 +360,16 @@ class _Follower:
                     "Check datum.origin_px (the centre of the mark while it hangs) and line.end_mark_m (its diameter).",
                 )
             )
-        burnt = getattr(self.eye, "burnt", None)
-        if burnt is not None:
+        if self.guessed_size is not None:
+            found.append(
+                Notice(
+                    "end-size-guessed",
+                    f"The size of what falls is not given; it looks {self.guessed_size:.1f} px wide.",
+                    "Its outline, and with it its place, is less certain.",
+                    "Give line.end_mark_m or line.object_diameter_m.",
+                )
+            )
+        if isinstance(self.eye, DiscEye) and self.eye.burnt is not None and seen.any():
             found.append(
                 Notice(
                     "end-in-background",

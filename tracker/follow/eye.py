@@ -1,7 +1,7 @@
 """How an end is seen in one frame: a round mark by its outline, a bare line by its tip. Following is in `end.py`."""
 
 from collections.abc import Iterator
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from typing import Any, Protocol
 
 import cv2
@@ -13,7 +13,7 @@ from tracker.follow.disc import BLUR, RADIUS, SOFT, Disc, disc_looks, look_sprea
 from tracker.follow.layer import Belief, LayerFit, Patch, fit_layer
 from tracker.follow.tip import LineEnd, find_tip
 
-__all__ = ["DiscEye", "Eye", "Sight", "TipEye", "View"]
+__all__ = ["U_RADIUS", "DiscEye", "Eye", "Sight", "TipEye", "View", "blob_size"]
 
 Floats = NDArray[np.float64]
 
@@ -146,7 +146,12 @@ class DiscEye:
     u_way: float = 0.15  # relative, of the way during the exposure
     belief: Belief | None = None
     level: float = 100.0  # of the look, to say how much one-sided light may change it [grey levels]
+    may_be_burnt: bool = True  # the mark may hang still for most of the clip at the place first looked at
+    given: Background = field(init=False)  # as it came; `background` may be mended where it shows the mark
     burnt: NDArray[np.bool_] | None = None  # where the background shows the mark itself, in the scene's pixels
+
+    def __post_init__(self) -> None:
+        self.given = self.background
 
     @property
     def radius(self) -> float:
@@ -306,7 +311,7 @@ class DiscEye:
         if max(fit.p_cov[0, 0], fit.p_cov[1, 1]) > (0.2 * self.radius) ** 2:
             return False
         noise = float(np.median(patch.sigma))
-        if fit.contrast < 3.0 * noise:
+        if fit.contrast < (3.0 if belief is not None else 5.0 if self.burnt is None else 10.0) * noise:
             return False
         if belief is None:  # nothing is known yet: only what is plainly a disc
             return fit.misfit < 2.5 and fit.explained > 0.75 and (self.burnt is None or (fit.misfit < 1.8 and fit.edge > 0.6))
@@ -396,6 +401,26 @@ class DiscEye:
             gain[max(0, row - n) : row + n + 1, max(0, column - n) : column + n + 1] = 0.0
         return found
 
+    def search(self, view: View) -> list[Floats]:
+        """Places in the whole picture where something differs from the scene on a disc and not on the ring around it."""
+        scene = self.background.expected(view.gray.shape, None, view.motion) * np.float32(view.gain)
+        left = np.minimum(np.abs(view.gray - scene), np.float32(60.0))
+        k = int(np.ceil(1.5 * self.radius + 2))
+        v, u = np.mgrid[-k : k + 1, -k : k + 1]
+        rho = np.hypot(u, v)
+        disc, ring = rho <= self.radius, (rho > self.radius + 1) & (rho <= 1.5 * self.radius + 2)
+        kernel = (disc / disc.sum() - ring / ring.sum()).astype(np.float32)
+        score = cv2.filter2D(left, cv2.CV_32F, kernel, borderType=cv2.BORDER_REFLECT)
+        found: list[Floats] = []
+        n = int(np.ceil(self.size_px))
+        while len(found) < _SEEK_MOST:
+            row, column = np.unravel_index(int(np.argmax(score)), score.shape)
+            if score[row, column] < 3 * self.background.noise:
+                break
+            found.append(np.array([column, row], dtype=float))
+            score[max(0, row - n) : row + n + 1, max(0, column - n) : column + n + 1] = 0.0
+        return found
+
     # --- a background that shows the mark -----------------------------------------------------------------------
 
     def _notice_burnt_in(self, view: View, near: Floats) -> None:
@@ -403,8 +428,10 @@ class DiscEye:
 
         What it is there is guessed from around, and replaced by what the mark uncovers when it falls.
         """
+        self.burnt = None
+        self.background = self.given
         region = _region(near, self.radius + 3, view.gray.shape)
-        if region is None:
+        if region is None or not self.may_be_burnt:
             return
         x0, y0, x1, y1 = region
         left = view.gray[y0:y1, x0:x1] - self.background.expected(view.gray.shape, region, view.motion) * np.float32(view.gain)
@@ -472,6 +499,34 @@ def _look_differs(one: Floats, other: Floats) -> float:
     share = np.array([1.0, 0.25, 0.25, 0.5]) if d.size == 4 else np.array([1, 0.25, 0.25, 0.5, 0.04, 0.1, 0.1, 0.17, 0.33])
     mean = float(d[0] + (2 / 3) * d[3] + (0.5 * d[8] if d.size == 9 else 0.0))
     return float(np.sqrt(mean**2 + (share[1] * d[1] ** 2 + share[2] * d[2] ** 2)))
+
+
+def blob_size(background: Background, view: View, near: Floats, reach: float) -> float | None:
+    """Diameter [px] of what differs from the scene at a place, if it is about as wide as it is high; else None.
+
+    Half of the largest difference is taken as its edge; the diameter is that of a disc of the same area.
+    """
+    region = _region(near, reach, view.gray.shape)
+    if region is None:
+        return None
+    x0, y0, x1, y1 = region
+    scene = background.expected(view.gray.shape, region, view.motion) * np.float32(view.gain)
+    left = cv2.GaussianBlur(np.abs(view.gray[y0:y1, x0:x1] - scene), (0, 0), 0.7)
+    top = float(np.percentile(left, 99.5))
+    if top < 6 * background.noise:
+        return None
+    for share in (0.5, 0.25):  # of a shaded ball parts are as bright as the wall
+        _, _, stats, centres = cv2.connectedComponentsWithStats((left > max(share * top, 4 * background.noise)).astype(np.uint8))
+        if len(stats) < 2:
+            continue
+        away = np.hypot(centres[1:, 0] + x0 - near[0], centres[1:, 1] + y0 - near[1])
+        k = 1 + int(np.argmin(away))
+        width, height, area = (float(stats[k, i]) for i in (cv2.CC_STAT_WIDTH, cv2.CC_STAT_HEIGHT, cv2.CC_STAT_AREA))
+        diameter = float(np.sqrt(4 * area / np.pi))
+        compact = area / (width * height) > 0.6 and 0.6 < width / height < 1.6
+        if compact and 3.0 <= diameter < 1.2 * reach and away[k - 1] < 0.5 * diameter + 4 * U_ORIGIN_PX:
+            return diameter
+    return None
 
 
 @dataclass(slots=True, eq=False)

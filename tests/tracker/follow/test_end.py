@@ -207,6 +207,65 @@ def test_two_that_look_alike_after_a_loss_are_called_ambiguous():
     assert not np.isfinite(follow.px[48:52]).any()
 
 
+def test_a_dropped_object_of_untold_size_is_looked_at():
+    scene = falling()
+    frames = list(scene.frames(100))
+    background = Background.from_frames([frames[i][1] for i in range(0, 100, 4)])
+    hints = LineHints("free-drop", ORIGIN, exposure_s=0.0005, px_per_m=400.0)
+    follow = follow_end(iter(frames), background, NO_PLANE, clock(100), hints)
+    error, inside = errors(follow, scene)
+    seen = np.isfinite(follow.px[:, 0])
+    assert seen[inside].mean() > 0.97
+    assert np.sqrt(np.mean(error[seen] ** 2)) < 0.1
+    assert np.nanmedian(follow.diameter_px) == pytest.approx(10.0, abs=0.6)
+    assert "end-size-guessed" in {n.code for n in follow.notices}
+
+
+def test_the_mark_of_an_edge_slide_is_found_below_the_edge():
+    scene = falling()
+    follow = followed(scene, 90, kind="edge-slide", origin=(150.0, 20.0))
+    error, inside = errors(follow, scene)
+    seen = np.isfinite(follow.px[:, 0])
+    assert seen[inside].mean() > 0.9
+    assert np.hypot(*error[seen].T).max() < 0.4
+
+
+def test_a_window_that_begins_after_the_release():
+    scene = falling()
+    frames = list(scene.frames(100))
+    background = Background.from_frames([frames[i][1] for i in range(0, 100, 4)])
+    hints = LineHints("free-drop", ORIGIN, end_mark_px=10.0, exposure_s=0.0005, px_per_m=400.0)
+    follow = follow_end(iter(frames[40:]), background, NO_PLANE, clock(100), hints)
+    assert follow.frame[0] == 40
+    true = np.array([scene.path(i / 240) for i in follow.frame])
+    inside = true[:, 1] <= SIZE[0] - 1
+    seen = np.isfinite(follow.px[:, 0])
+    assert seen[inside].mean() > 0.9
+    assert np.hypot(*(follow.px - true)[seen].T).max() < 0.4
+
+
+def test_the_bare_end_of_a_line_is_followed():
+    fall = dropped(ORIGIN, 0.06)
+
+    def bar(frame, index):  # a bar 5 px wide that hangs 60 px down from the end
+        y, x = np.mgrid[0 : 400 * 4, 0 : 240 * 4] / 4 + 0.125 - 0.5
+        at = fall(index / 240)
+        inside = (np.abs(x - at[0]) < 2.5) & (y > at[1]) & (y < at[1] + 60)
+        cover = cv2.GaussianBlur(inside.reshape(400, 4, 240, 4).mean(axis=(1, 3)), (0, 0), 0.6)
+        return frame * (1 - cover) + 210.0 * cover
+
+    scene = Scene(still=wall(SIZE), path=lambda t: np.array([-50.0, -50.0]), before=bar)
+    frames = list(scene.frames(60))
+    background = Background.from_frames([f for _, f in frames[::3]])
+    hints = LineHints("surface-drop", ORIGIN, exposure_s=0.0005, px_per_m=1250.0)
+    follow = follow_end(iter(frames), background, NO_PLANE, clock(60), hints)
+    error = follow.px - np.array([fall(i / 240) for i in range(60)])
+    seen = np.isfinite(follow.px[:, 0])
+    assert seen.mean() > 0.9
+    assert np.hypot(*error[seen].T).max() < 0.6
+    assert follow.bias_px > 0.3  # how the end is cut is not known
+
+
 def test_a_wrong_origin_finds_nothing_and_says_so():
     scene = falling()
     follow = followed(scene, 40, origin=(180.0, 250.0))

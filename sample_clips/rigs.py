@@ -111,7 +111,7 @@ class SurfaceRig(_FromRecord):
 
     def __init__(self, landing: Landing, release_s: float, pitch_m: float, ball: Ball, heap_m: float = 0.012) -> None:
         record = landing.record
-        super().__init__(Record(record.t_s, record.state[:, 0], record.rate[:, 0]), release_s)
+        super().__init__(_to_rest(Record(record.t_s, record.state[:, 0], record.rate[:, 0])), release_s)
         self._all, self._landed, self._ball = record, landing.landed_s, ball
         self._s = evenly(record.state.shape[1], pitch_m)  # from the top end
         laid = self._s[-1] - self._s  # length that has landed before each mass
@@ -125,10 +125,24 @@ class SurfaceRig(_FromRecord):
         points = in_world(self._all.at(since))
         lying = np.nan_to_num(-np.expm1(-np.maximum(since - self._landed, 0) / 0.006))
         points += lying[:, None] * np.stack([self._aside, self._away, self._up], axis=1)
+        points[0] = self.end(t)
         return Strand(points, self._s, np.ones(self._s.size, dtype=bool))
 
     def discs(self, t: float) -> Sequence[Ball]:
-        return [_moved(self._ball, self.end(min(t, self.release_s + float(self._all.t_s[-1]))))]
+        return [_moved(self._ball, self.end(t))]
+
+    def over(self, t: ArrayLike) -> NDArray[np.bool_]:
+        return np.zeros(np.shape(t), dtype=bool)  # it lies where it landed
+
+
+def _to_rest(path: Record) -> Record:
+    """A path (k, 2) that stops dead at its end and stays there: the ball lies on what has landed."""
+    still = np.zeros((2, 2))
+    return Record(
+        np.r_[path.t_s, path.t_s[-1] + [1e-6, 1.0]],
+        np.vstack([path.state, path.state[-1:], path.state[-1:]]),
+        np.vstack([path.rate, still]),
+    )
 
 
 class EdgeRig(_FromRecord):
@@ -150,10 +164,6 @@ class EdgeRig(_FromRecord):
         s = np.unique(np.r_[self._s, (u - bend)[(u - bend > 0) & (u - bend < self._s[-1])]])
         s = s[np.r_[True, np.diff(s) > 1e-9]]
         return Strand(in_world(self._slide.place(u - s) - self._start), s, np.ones(s.size, dtype=bool))
-
-    def over(self, t: ArrayLike) -> NDArray[np.bool_]:
-        gone = self._slide.record.at(np.asarray(t, dtype=float) - self.release_s)[..., 0]
-        return np.asarray(gone + self._slide.overhang_m > self._slide.length_m)  # the trailing end has left the table
 
     def discs(self, t: float) -> Sequence[Ball]:
         return [_moved(self._ball, self.end(t))]

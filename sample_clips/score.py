@@ -165,6 +165,8 @@ def _expected(name: str, quantity: Mapping[str, Any], truth: Table, truths: Mapp
         if window is None:
             return None
         t, z = truth["end_t_s"], truth["end_z_m"]
+        if window[0] < np.nanmin(t) - 0.01 or window[1] > np.nanmax(t) + 0.01:
+            return None  # there is no truth for all of it
         within = np.isfinite(z) & (t >= window[0] - 1e-6) & (t <= window[1] + 1e-6)
         if within.sum() < 5:
             return None

@@ -37,6 +37,7 @@ _U_RATIO = 0.05  # of spacing or pitch as measured to as stated, before anything
 _U_PLACEMENT = 0.005  # relative, of one mark's place on the line where nothing else is said
 _ODD_RATIO = 0.06
 _MOST_ACCELERATION = 100.0  # m/s^2
+_USUAL_BENDS, _ADAPTED_ROUNDS = 3.0, 2  # where the speed bends more often than usual, it is smoothed less
 _POWERS = np.arange(-2.0, 5.01, 0.5)
 _BLOCK_FRAMES, _FOLDS = (4.0, 12.0), 4  # a twentieth of the clip, but no fewer and no more
 _MOST_HEAVIER = 4
@@ -289,6 +290,9 @@ class _Fit:
             left = (y - x @ answer) / u
             scale = max(1.4826 * float(np.median(np.abs(left))), 1e-3)
             weight = np.minimum(1.0, 2.5 * scale / np.maximum(np.abs(left), 1e-12)) / u**2
+        penalty, weight = self._adapted(x, y, u, power, d, answer, weight, penalty, held_x, held_y, held_u)
+        answer, normal = self._solved(*self._gram(x, y, weight), 10.0**power * penalty, held_x, held_y, held_u)
+        left = (y - x @ answer) / u
         if frame.max() >= 6 * long:  # errors that neighbours share show over longer stretches only
             found = self.foretold
             self._power(x, y, weight, penalty, held_x, held_y, held_u, np.floor(frame / long).astype(np.intp))
@@ -305,6 +309,26 @@ class _Fit:
                 self.ratio = self.u_ratio = float("nan")
         if self.joined is not None:
             self.stretch, self.u_stretch = float(answer[last + 1]), float(np.sqrt(self.cov[last + 1, last + 1]))
+
+    def _adapted(
+        self, x: Floats, y: Floats, u: Floats, power: float, d: Floats, answer: Floats, weight: Floats, penalty: Floats,
+        held_x: Floats, held_y: Floats, held_u: Floats,
+    ) -> tuple[Floats, Floats]:  # fmt: skip
+        """Penalty and weights once more, lighter where the speed bends much more than it usually does.
+
+        One weight for a whole run is a compromise between its calm stretches and a snag: it rounds the snag off. Where a
+        first fit bends by more than a few times the usual, the penalty there is lowered by the square of that.
+        """
+        for _ in range(_ADAPTED_ROUNDS):
+            bend = np.abs(d @ answer[: self.size])
+            light = 1.0 / (1.0 + (bend / (_USUAL_BENDS * float(np.median(bend)) + 1e-30)) ** 2)
+            penalty = penalty.copy()
+            penalty[: self.size, : self.size] = d.T @ (light[:, None] * d)
+            answer, _ = self._solved(*self._gram(x, y, weight), 10.0**power * penalty, held_x, held_y, held_u)
+            left = (y - x @ answer) / u
+            scale = max(1.4826 * float(np.median(np.abs(left))), 1e-3)
+            weight = np.minimum(1.0, 2.5 * scale / np.maximum(np.abs(left), 1e-12)) / u**2
+        return penalty, weight
 
     def _equations(self) -> tuple[Floats, Floats, Floats, Floats]:
         """Design, right-hand side, u and number of the frame of every observation."""

@@ -252,30 +252,44 @@ def _table(stage: Stage, follow: EndFollow, track: Track) -> pd.DataFrame:
     return table
 
 
-UNRESOLVED = 0.25  # of the speed: a change from frame to frame that no smoothing may hide
+UNRESOLVED = 0.5  # of the mean speed: a change of the velocity from one frame to the next that no smoothing may hide
 
 
 def _speeds(track: Track) -> tuple[Floats, Floats]:
     """Speed of the end, frame by frame, with its standard uncertainty.
 
     From a local cubic over five frames to either side where motion allows it, that is where a parabola over two frames
-    to either side says the same; from that parabola where not, half the difference in u; empty where the speed
-    changes too much from one frame to the next for either.
+    to either side says the same; from that parabola where not, half the difference in u. Empty where the velocity
+    changes too much from one frame to the next, as in a whip: what a smoother gives there is not the end's speed.
     """
     across = replace(track, z_m=track.x_m)
     speed, u = np.full(track.t_s.size, np.nan), np.full(track.t_s.size, np.nan)
-    for i in np.flatnonzero(np.isfinite(track.z_m) & np.isfinite(track.t_s)):
+    whipping = _whipping(track)
+    for i in np.flatnonzero(np.isfinite(track.z_m) & np.isfinite(track.t_s) & ~whipping):
         at = float(track.t_s[i])
         wide = _speed(local_state(across, at, reach=5), local_state(track, at, reach=5))
         narrow = _speed(local_state(across, at, reach=2, degree=2), local_state(track, at, reach=2, degree=2))
         if wide is None or narrow is None:
             continue
         apart = abs(wide[0] - narrow[0])
-        if apart <= 2 * float(np.hypot(wide[1], narrow[1])):
+        if apart <= 2 * float(np.hypot(wide[1], narrow[1])) and not whipping[max(0, i - 5) : i + 6].any():
             speed[i], u[i] = wide
-        elif apart <= UNRESOLVED * narrow[0]:
+        else:
             speed[i], u[i] = narrow[0], float(np.hypot(narrow[1], 0.5 * apart))
     return speed, u
+
+
+def _whipping(track: Track) -> NDArray[np.bool_]:
+    """Frames about which the velocity changes by more than half of itself, beyond what the noise of places can do."""
+    step = np.stack([np.diff(track.x_m), np.diff(track.z_m)], axis=1) / np.diff(track.t_s)[:, None]
+    change = np.hypot(*(step[1:] - step[:-1]).T)
+    mean = 0.5 * (np.hypot(*step[1:].T) + np.hypot(*step[:-1].T))
+    noise = float(np.nanmedian(track.u_m)) / float(np.nanmedian(np.diff(track.t_s)))
+    wild = (change > UNRESOLVED * mean) & (change > 10 * noise) & (mean > 20 * noise)
+    out = np.zeros(track.t_s.size, dtype=bool)
+    for shift in (0, 1, 2):  # a frame and its two neighbours
+        out[shift : shift + wild.size] |= wild
+    return out
 
 
 def _speed(side: _State | None, down: _State | None) -> tuple[float, float] | None:

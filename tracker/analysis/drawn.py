@@ -43,7 +43,7 @@ def find_snags(t_s: Floats, speed: Floats, u: Floats) -> tuple[Snag, ...]:
     edges = np.flatnonzero(np.diff(np.concatenate([[0], low.astype(int), [0]])))
     snags = []
     for begin, end in zip(edges[::2], edges[1::2], strict=True):
-        if end - begin < 2:
+        if end - begin < 2 or begin == 0 or end == low.size:  # a line that starts up or runs out is not snagged
             continue
         lost = float(np.trapezoid(usual - speed[begin:end], t_s[begin:end]))
         snags.append(Snag(float(t_s[begin]), float(t_s[end - 1]), float(speed[begin:end].min()), lost))

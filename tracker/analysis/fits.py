@@ -87,9 +87,9 @@ def noise_of(residuals: Floats, steps: Floats, parameters: int) -> Noise:
 
     Notes
     -----
-    The lag-1 correlation of residuals of a fit is low by about (1 + 4 rho)/n for a mean (Kendall, Biometrika 41,
-    403 (1954)) and more for each further parameter; it is raised by (parameters + 3 rho)/n, cut to 0..0.95, so that
-    the noise is never taken for better than white.
+    The lag-1 correlation of residuals is low by about (1 + 3 rho)/n for a mean (Kendall, Biometrika 41, 403 (1954)), and
+    each further parameter takes about (1 + rho)/n: raw = rho - (p (1 + rho) + 3 rho)/n is solved for rho, cut to 0..0.95,
+    so that the noise is never taken for better than white.
     """
     n = residuals.size
     spare = max(n - parameters, 1)
@@ -99,7 +99,8 @@ def noise_of(residuals: Floats, steps: Floats, parameters: int) -> Noise:
         return Noise(sigma, 0.0, float(spare))
     variance = float(residuals @ residuals) / n
     raw = float(np.mean(residuals[pairs] * residuals[pairs + 1])) / variance
-    rho = float(np.clip(raw + (parameters + 3 * max(raw, 0.0)) / n, 0.0, STRONGEST))
+    spent = min(parameters / n, 0.4)
+    rho = float(np.clip((raw + spent) / (1 - spent - 3 / n), 0.0, STRONGEST)) if raw > -spent else 0.0
     # the variance of residuals is itself low where errors hang together: the fit follows them
     effective = n * (1 - rho) / (1 + rho)
     lost = min(parameters, 0.8 * effective) if rho > 0 else parameters

@@ -21,6 +21,7 @@ __all__ = ["FreeDropSetup", "evaluate", "predict"]
 Floats = NDArray[np.float64]
 AIR_DENSITY = 1.2  # kg/m^3, at 20 degrees and sea level
 DRAG_COEFFICIENT = 0.47  # a sphere at Reynolds numbers of 1e3 to 2e5; u 20 % (design, section 4)
+EARLY_M = 0.15  # of fall from which the release is found: drag has not bent it yet
 FEW_FRAMES = 2  # after release: the first frames of a fall are not yet clear of the release
 
 
@@ -68,12 +69,20 @@ def _terminal_speed(setup: FreeDropSetup) -> float | None:
     return math.sqrt(2 * setup.mass_kg * setup.gravity / (AIR_DENSITY * setup.drag_coefficient * area))
 
 
-def drag_share(setup: FreeDropSetup, t_s: Floats, release_s: float) -> float:
-    """By how much drag lowers the best-fitting constant acceleration over times t_s, relative to gravity."""
+def buoyancy(setup: FreeDropSetup) -> float:
+    """Share of its weight that air carries of the object; 0 where size or mass are not known."""
+    if setup.diameter_m is None or setup.mass_kg is None:
+        return 0.0
+    return AIR_DENSITY * math.pi / 6 * setup.diameter_m**3 / setup.mass_kg
+
+
+def air_share(setup: FreeDropSetup, t_s: Floats, release_s: float) -> float:
+    """By how much air, by buoyancy and drag, lowers the best-fitting constant acceleration over times t_s, relative to gravity."""
     if _terminal_speed(setup) is None:
         return 0.0
     rows, _, half = polynomial_rows(t_s, 2)
-    parameters, *_ = np.linalg.lstsq(rows, predict(setup, t_s - release_s), rcond=None)
+    lighter = replace(setup, gravity=setup.gravity * (1 - buoyancy(setup)))
+    parameters, *_ = np.linalg.lstsq(rows, predict(lighter, t_s - release_s), rcond=None)
     return float(1.0 - 3.0 / half**2 * parameters[2] / setup.gravity)
 
 
@@ -90,15 +99,15 @@ def evaluate(track: Track, setup: FreeDropSetup) -> Evaluation:
     Evaluation
         `measured_gravity_mps2`, `effective_acceleration_mps2`, `acceleration_ratio`, `release_s`.
     """
-    release = find_release(track, setup.gravity, reach_m=np.inf)
+    release = find_release(track, setup.gravity, reach_m=EARLY_M)
     out = add_release(Evaluation(), release)
     window = setup.window_s or _default_window(track, release.t_s if release is not None else None)
     out, fit = accelerations(out, track, window, setup.gravity, {}, parabola=True)
     if fit is None:
         return replace(out, absent={**out.absent, "measured_gravity_mps2": out.absent["effective_acceleration_mps2"]})
     started = release.t_s if release is not None else float(fit.t_s[0])
-    share = drag_share(setup, fit.t_s, started)
-    extra: Mapping[str, object] = {**out.estimates["effective_acceleration_mps2"].extra, "drag_share": share}
+    share = air_share(setup, fit.t_s, started)
+    extra: Mapping[str, object] = {**out.estimates["effective_acceleration_mps2"].extra, "air_share": share}
     words = "local gravity as the clip shows it: the fitted acceleration, freed of drag where size and mass are known"
     found = Estimate(fit.a / (1 - share), "m/s2", fit.u_a / (1 - share), fit.dof, out.window_s, words, extra)
     findings: tuple[Finding, ...] = out.findings

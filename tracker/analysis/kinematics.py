@@ -152,6 +152,8 @@ def find_release(track: Track, gravity: float, reach_m: float) -> Release | None
         lambda r: squares(r)[0], bounds=(guess - 8 * step, guess + 8 * step), method="bounded", options={"xatol": 1e-7}
     )
     release = float(best.x)
+    if release < track.t_s[ok[2]]:  # fewer than three frames of rest are none
+        return None
     _, rest, parameters = squares(release)
     steps = frame_steps(t)
     found = noise_of(rest, steps, 3)

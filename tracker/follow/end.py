@@ -29,6 +29,7 @@ _LINE_M = 0.004  # width of a line whose end carries no mark, to begin with [m]
 _HALF_HIDDEN = 0.85  # of the usual share of the outline
 _LARGEST_M = 0.15  # half of a window in which a dropped object of untold size is looked for [m]
 _U_GUESSED = 0.06  # relative, of such a size
+_FALLS = ("free-drop", "surface-drop")
 _IN_A_ROW = 3  # frames that must agree before a mark that was lost counts as found
 _PATIENCE = 12  # frames searched within reach of the last place; afterwards the whole picture, now and then
 _EVERY = 4
@@ -248,7 +249,7 @@ class _Follower:
             if sight is not None and self._inside(sight, view):
                 return sight
         if self._leaves(at, velocity, outside, view, eye.size_px):
-            self.gone = self.hints.kind in ("free-drop", "surface-drop", "edge-slide")
+            self.gone = self.hints.kind in (*_FALLS, "edge-slide")
             kept.flags.append("end-out-of-picture")
             return None
         return self._seek(eye, view, t, at, velocity, gate, kept)
@@ -282,7 +283,9 @@ class _Follower:
         """Search around, farther out the longer it has not been seen."""
         size, last = eye.size_px, view.to_frame(self.course.px[-1])
         since = t - self.course.t_s[-1]
-        if self.lost < _PATIENCE:
+        if self.hints.kind in _FALLS:  # what falls goes on falling, or stops on its way: nowhere else is it looked for
+            middle, reach = 0.5 * (at + last), 0.5 * float(np.hypot(*(at - last))) + min(gate, size) + size
+        elif self.lost < _PATIENCE:
             step = float(np.hypot(*velocity)) * since
             reach = min(gate, 4 * size) + 2 * size + step
             middle = 0.5 * (at + last) if self.lost == 0 else last

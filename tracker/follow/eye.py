@@ -24,6 +24,8 @@ _SOFT_KEPT = 0.08  # how much it may change from frame to frame, relative
 _GRID = 40  # the light of a frame is read off about so many columns and rows
 _SURE_PX = 1.2  # a place foretold closer than this is a good enough start
 _PLAIN_EDGE, _PLAIN_MISFIT = 0.6, 1.8  # of a fit that is plainly right
+_LEAST_CONTRAST = 8.0  # grey levels, to begin with: compressed walls are quieter than they are true
+_EXPLAINS = ((0.85, np.inf), (0.75, 3.0), (0.5, 2.0))  # a fit explains so much, or less with residuals so small
 _RIVAL = 1.05  # times the least cost: such a fit might as well be the right one
 _USUAL = 0.1  # weight of it in each frame
 _SEEK_MOST = 5  # candidates looked at closely
@@ -167,6 +169,7 @@ class DiscEye:
         """The mark where the sheet says that it hangs; its look is not known yet."""
         reach = max(4 * U_ORIGIN_PX, 0.35 * self.radius)
         self._notice_burnt_in(view, near)
+        self.may_be_burnt &= self.burnt is not None  # where it once stood out from the scene, an empty place is empty
         patch = self._patch(view, near, 1.1 * self.radius + reach + 4)
         if patch is None:
             return None
@@ -205,7 +208,8 @@ class DiscEye:
             return None
         return self._sight(best.fit, view, best.spread)
 
-    def _settle(self, view: View, start: Floats, velocity: Floats, way: Floats, gate: float) -> "_Settled | None":
+    def _settle(self, view: View, start: Floats, velocity: Floats, way: Floats, gate: float,
+                strict: bool = False) -> "_Settled | None":
         """The best fit from one start, and its patch; from all around it, where the first try is not plainly right."""
         patch = self._patch(view, start, 1.08 * self.radius + 4 + gate + 0.5 * float(np.hypot(*way)))
         if patch is None:
@@ -221,12 +225,13 @@ class DiscEye:
                 other = fit_layer(patch, disc, replace(belief, p=p), soften=(0.7, 0.3, 0.0, 0.0, 0.0), reach=reach)
                 if other is not None:
                     tried.append(other)
-        tried = [one for one in tried if self._good(one, patch, belief, view.gray.shape)]
+        tried = [one for one in tried if self._good(one, patch, belief, view.gray.shape, strict)]
         if not tried:
             return None
         best = min(tried, key=lambda one: one.cost)
         rivals = np.array([one.p[:2] for one in tried if one.cost < _RIVAL * best.cost])
-        return _Settled(best, np.sqrt(((rivals - best.p[:2]) ** 2).mean(axis=0)))
+        spread = np.sqrt(((rivals - best.p[:2]) ** 2).mean(axis=0))
+        return _Settled(best, spread) if float(np.hypot(*spread)) < max(0.25 * self.radius, 0.5) else None
 
     def seek(self, view: View, place: Floats, last: Floats, since_s: float, reach_px: float, way_s: float) -> list[Sight]:
         """All that look like the mark within reach, best first."""
@@ -235,7 +240,7 @@ class DiscEye:
         for start in self._candidates(view, place, reach_px, np.zeros(2)):
             velocity = (start - last) / max(since_s, 1e-6)
             way = velocity * way_s
-            one = self._settle(view, start, velocity, way, float(np.hypot(*way)) + 2.0)
+            one = self._settle(view, start, velocity, way, float(np.hypot(*way)) + 2.0, strict=True)
             if one is not None:
                 found.append(self._sight(one.fit, view, one.spread))
         found.sort(key=lambda sight: -sight.quality)
@@ -299,7 +304,8 @@ class DiscEye:
 
     # --- judging ------------------------------------------------------------------------------------------------
 
-    def _good(self, fit: LayerFit, patch: Patch, belief: Belief | None, shape: tuple[int, ...]) -> bool:
+    def _good(self, fit: LayerFit, patch: Patch, belief: Belief | None, shape: tuple[int, ...],
+              strict: bool = False) -> bool:
         """Whether this is the mark, as far as the picture can say."""
         h, w = shape
         inside = _share_inside(fit.p[:2], self.radius, (w, h))
@@ -311,11 +317,15 @@ class DiscEye:
         if max(fit.p_cov[0, 0], fit.p_cov[1, 1]) > (0.2 * self.radius) ** 2:
             return False
         noise = float(np.median(patch.sigma))
-        if fit.contrast < (3.0 if belief is not None else 5.0 if self.burnt is None else 10.0) * noise:
+        least = (3.0 if strict else 2.0) if belief is not None else 5.0 if self.burnt is None else 10.0
+        if fit.contrast < max(least * noise, _LEAST_CONTRAST if belief is None else 0.5 * _LEAST_CONTRAST):
             return False
         if belief is None:  # nothing is known yet: only what is plainly a disc
-            return fit.misfit < 2.5 and fit.explained > 0.75 and (self.burnt is None or (fit.misfit < 1.8 and fit.edge > 0.6))
-        if not (fit.explained > 0.85 or (fit.misfit < 2.0 and fit.explained > 0.5)):
+            plain = (fit.misfit < 2.5 and fit.explained > 0.75) or (fit.misfit < 4.0 and fit.explained > 0.88 and fit.edge > 0.4)
+            return plain and (self.burnt is None or (fit.misfit < 1.8 and fit.explained > 0.9 and min(fit.edge, fit.cover) > 0.7))
+        if strict and (fit.edge < 0.4 or fit.explained < 0.7):
+            return False
+        if not any(fit.explained > share and fit.misfit < most for share, most in _EXPLAINS):
             return False
         return _look_differs(fit.look, belief.look) < 0.2 * max(abs(float(belief.look[0])), fit.contrast) + 6 * noise
 

@@ -3,6 +3,7 @@
 Exit codes: 0 measured; 2 bad input; 3 the footage cannot carry the measurement. A failure is one sentence on stderr.
 """
 
+import json
 import os
 import sys
 import tempfile
@@ -82,6 +83,45 @@ def measure(
     _each(sheets, lambda sheet: _measure_one(sheet, _folder_for(sheet, out, len(sheets)), overlay, replace, quiet))
 
 
+@app.command()
+def clock(
+    clip: Annotated[Path, typer.Argument(help="A clip as the phone recorded it.", metavar="CLIP")],
+    as_json: Annotated[bool, typer.Option("--json", help="The audit as JSON.")] = False,
+) -> None:
+    """Say what a clip's time stamps are worth, and what to write into the run sheet.
+
+    Slow motion is stored three ways: with true stamps, stretched (240 stored as 30), or ramped. The audit says which,
+    where the true rate comes from, and what is missing. Exit code 3: the true rate of capture cannot be told from the file.
+    """
+    from tracker.audit import audit_clip
+
+    audit = audit_clip(clip)
+    print(json.dumps(audit.as_dict(), indent=1, allow_nan=False) if as_json else "\n".join(audit.lines()))
+    if audit.refusal is not None:
+        raise audit.refusal
+
+
+@app.command()
+def board(
+    out: Annotated[Path, typer.Option(help="File to write: .pdf or .svg.")],
+    paper: Annotated[str, typer.Option(help="A4, A3 or Letter.")] = "A4",
+    square_mm: Annotated[float, typer.Option(help="Side of a square in millimetres.")] = 25.0,
+    inner_corners: Annotated[str, typer.Option(help="Inner corners each way, one fewer than squares.")] = "9x6",
+) -> None:
+    """Draw a checkerboard to print, with a 100 mm bar to measure after printing.
+
+    Glue it to a flat plate, stand it plumb beside the motion, and copy the lines printed on it into the run sheet.
+    """
+    from tracker.boardsheet import write_board
+
+    try:
+        columns, rows = (int(part) for part in inner_corners.lower().split("x"))
+    except ValueError:
+        raise BadInput(f"--inner-corners is {inner_corners!r}.", "Write columns x rows, as 9x6.") from None
+    sheet = write_board(out, paper, square_mm, (columns, rows))
+    print(f"Wrote {out}: squares of {sheet.square:g} mm on {paper}. Print at 100 % and measure the 100 mm bar.")
+
+
 def _folder_for(sheet: Path, out: Path | None, how_many: int) -> Path:
     default = sheet.with_name(f"{sheet.stem}-results")
     if out is None:
@@ -99,7 +139,13 @@ def _measure_one(sheet: Path, folder: Path, overlay: bool, replace: bool, quiet:
     with _progress(sheet.name) as tell:
         measured = measure_run(sheet, progress=tell)
         write_folder(
-            measured.result, folder, frames=measured.frames, sample=measured.sample, overlay=overlay, progress=tell, replace=replace
+            measured.result,
+            folder,
+            frames=measured.frames,
+            sample=measured.sample,
+            overlay=overlay,
+            progress=tell,
+            replace=replace,
         )
     screen, errors = _console(sys.stdout), _console(sys.stderr)
     if quiet:

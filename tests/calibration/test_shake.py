@@ -29,7 +29,7 @@ def moved(grey, dx, dy, turn, zoom=1.0, noise=1.5, gain=1.0, rng=None, margin=60
     centre = np.array([(WIDTH - 1) / 2, (HEIGHT - 1) / 2])
     c, s = zoom * np.cos(turn), zoom * np.sin(turn)
     linear = np.array([[c, -s], [s, c]])
-    matrix = np.c_[linear, centre + [dx, dy] - linear @ (centre + margin)]
+    matrix = np.c_[linear, centre + np.array([dx, dy]) - linear @ (centre + margin)]
     seen = cv2.warpAffine(grey, matrix, (WIDTH, HEIGHT), flags=cv2.INTER_LANCZOS4)
     return np.clip(np.round(gain * seen + rng.normal(0, noise, seen.shape)), 0, 255).astype(np.uint8)
 

@@ -205,7 +205,7 @@ def test_disk_full_is_one_sentence_and_leaves_nothing(bench, tmp_path, monkeypat
     measured = measure_run(bench / "drop.toml")
 
     def full(*_args, **_kwargs):
-        with open("/dev/full", "wb", buffering=0) as device:
+        with Path("/dev/full").open("wb", buffering=0) as device:
             device.write(b"x")
 
     monkeypatch.setattr(room, "write_overlay", full)
@@ -230,7 +230,8 @@ def test_version_and_help_teach():
 
 
 def test_c_locale_does_not_break_the_screen(bench, tmp_path):
-    run = linefall("measure", bench / "drop.toml", "--no-overlay", "--out", tmp_path / "r", LC_ALL="C", PYTHONUTF8="0", PYTHONCOERCECLOCALE="0")
+    plain = {"LC_ALL": "C", "PYTHONUTF8": "0", "PYTHONCOERCECLOCALE": "0"}
+    run = linefall("measure", bench / "drop.toml", "--no-overlay", "--out", tmp_path / "r", **plain)
     assert run.returncode == 0, run.stderr
 
 

@@ -166,4 +166,9 @@ def _law(
             [grid, level - predict(grid - release.t_s, 1.0, full, setup.gravity)], axis=1
         ),
     }
-    return replace(out, estimates={**out.estimates, name: value}, findings=findings, curves=curves)
+    found = {**out.estimates, name: value}
+    if findings == out.findings:  # the law holds: it knows the release better than a parabola, which its growing pull bends
+        at = release.t_s + float(fit.parameters[1])
+        words_of_release = "moment at which the end, at rest before, begins to fall, as the fold law of the window has it"
+        found["release_s"] = Estimate(at, "s", float(np.sqrt(fit.covariance[1, 1])), fit.noise.dof, None, words_of_release)
+    return replace(out, estimates=found, findings=findings, curves=curves)

@@ -85,6 +85,8 @@ class Bench:
         Of the ball at the end, or the dropped ball [m]; 0: none.
     measurable : bool
         False: the right answer is to refuse, see `says`.
+    beside : mapping
+        Text files that the sheet names, by file name.
     """
 
     name: str
@@ -99,6 +101,7 @@ class Bench:
     seed: int
     end_radius_m: float = 0.0
     measurable: bool = True
+    beside: Mapping[str, str] = field(default_factory=dict)
 
     def motion(self) -> Motion:
         """What moves, for the renderer."""
@@ -253,6 +256,38 @@ def _payout_cable() -> Bench:
 # --- a chain that lands -----------------------------------------------------------------------------------------------
 
 
+_LENS = """# Invented: the phone of the Harrow Point bench, calibrated from 18 views; true to its stated uncertainty, not exact.
+format = 1
+camera = "Harrow Point bench phone, main camera, 240 per second"
+size = [720, 1280]
+views = 18
+residual_px = 0.09
+
+[lens]
+fx = 1475.2
+fy = 1475.0
+cx = 366.3
+cy = 640.2
+k1 = -0.047
+k2 = 0.043
+p1 = 0.0
+p2 = 0.0
+k3 = 0.0
+# covariance of fx, fy, cx, cy, k1, k2, p1, p2, k3
+covariance = [
+    [2.56, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0],
+    [0.0, 2.56, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0],
+    [0.0, 0.0, 3.24, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0],
+    [0.0, 0.0, 0.0, 3.24, 0.0, 0.0, 0.0, 0.0, 0.0],
+    [0.0, 0.0, 0.0, 0.0, 3.6e-05, 0.0, 0.0, 0.0, 0.0],
+    [0.0, 0.0, 0.0, 0.0, 0.0, 0.0004, 0.0, 0.0, 0.0],
+    [0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 4e-08, 0.0, 0.0],
+    [0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 4e-08, 0.0],
+    [0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 1e-12],
+]
+"""
+
+
 def _surface_drop() -> Bench:
     camera = Camera(
         fx=1476, fy=1476, cx=365.5, cy=641.0, k1=-0.05, k2=0.05, position_m=(0.09, -1.302, -0.41), yaw_deg=0.8, pitch_deg=-0.6,
@@ -289,7 +324,7 @@ def _surface_drop() -> Bench:
             "clip": {"file": "clip.mp4"},
             "clock": {"capture_fps": 240.0, "readout_s": -0.0040, "exposure_s": 0.0006},
             "board": _board_table(board, offset_m=0.010, u_offset_m=0.0005, lean_deg=0.0, u_lean_deg=0.3, yaw_deg=0.0, u_yaw_deg=0.5),
-            "camera": {"distance_m": 1.30, "u_distance_m": 0.01},
+            "camera": {"lens": "phone.lens.toml", "distance_m": 1.30, "u_distance_m": 0.01},
             "datum": {
                 "origin_px": _seen(camera, (0, 0, 0)), "u_origin_px": 0.7, "origin_frame": 0,
                 "floor_px": _seen(camera, (0, 0, surface)), "u_floor_px": 0.7, "vertical": "board",
@@ -300,7 +335,7 @@ def _surface_drop() -> Bench:
             },
             "test": _test_table("surface-drop", "surface-drop", drop_height_m=round(-surface + 0.0005, 4), u_drop_height_m=0.001),
             "site": _SITE,
-        }, seed=103, end_radius_m=0.006,
+        }, seed=103, end_radius_m=0.006, beside={"phone.lens.toml": _LENS},
     )  # fmt: skip
 
 

@@ -51,6 +51,7 @@ def texts(bench: Bench) -> dict[str, str]:
         "truth.csv": text_of(rows),
         "truth.json": json.dumps(_rounded(truths), indent=1) + "\n",
         "scene.json": json.dumps(_rounded(_scene(bench, made)), indent=1) + "\n",
+        **bench.beside,
     }
 
 

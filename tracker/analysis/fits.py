@@ -42,6 +42,23 @@ class Noise:
         """Covariance (n, n) of errors at places `steps` (n,), counted in frames."""
         return self.sigma**2 * self.rho ** np.abs(steps[:, None] - steps[None, :])
 
+    def through(self, gain: Floats, steps: Floats) -> Floats:
+        """Covariance (p, p) of gain @ errors, gain (p, n), in memory that grows with n and not with its square.
+
+        The inverse of a first-order autoregression's covariance has three diagonals whatever the gaps (an
+        Ornstein-Uhlenbeck process is Markov), so its product with a vector is one banded solution.
+        """
+        if self.rho <= 0 or steps.size < 2:
+            return np.asarray(self.sigma**2 * gain @ gain.T, dtype=float)
+        alike = self.rho ** np.maximum(np.diff(steps), 1e-3)
+        loss = 1.0 / (1.0 - alike**2)
+        bands = np.zeros((2, steps.size))
+        bands[1] = 1.0
+        bands[1, :-1] += alike**2 * loss
+        bands[1, 1:] += alike**2 * loss
+        bands[0, 1:] = -alike * loss
+        return np.asarray(self.sigma**2 * gain @ linalg.solveh_banded(bands, gain.T), dtype=float)
+
 
 @dataclass(frozen=True, slots=True, eq=False)
 class LinearFit:
@@ -169,7 +186,7 @@ def fit_linear(rows: Floats, y: Floats, steps: Floats, noise: Noise | None = Non
     parameters = parameters + residuals_again
     residuals = y - rows @ parameters
     found = noise if noise is not None else noise_of(residuals, steps, p)
-    return LinearFit(parameters, inverse @ found.covariance(steps) @ inverse.T, residuals, found)
+    return LinearFit(parameters, found.through(inverse, steps), residuals, found)
 
 
 def fit_nonlinear(
@@ -205,4 +222,4 @@ def fit_nonlinear(
     residuals = -fit.fun
     noise = noise_of(residuals, steps, start.size)
     inverse = np.linalg.pinv(fit.jac) * scales[:, None]
-    return NonlinearFit(parameters, inverse @ noise.covariance(steps) @ inverse.T, residuals, noise, bool(fit.success))
+    return NonlinearFit(parameters, noise.through(inverse, steps), residuals, noise, bool(fit.success))

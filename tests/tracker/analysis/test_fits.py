@@ -94,6 +94,27 @@ def test_covariance_of_correlated_errors_is_the_sandwich(rng):
     np.testing.assert_allclose(fit.covariance, pinv @ sigma @ pinv.T, rtol=1e-9)
 
 
+@pytest.mark.parametrize("rho", [0.0, 0.3, 0.95])
+def test_covariance_without_its_matrix_is_the_same(rng, rho):
+    """The banded solution against the full matrix, over gaps."""
+    steps = np.cumsum(rng.choice([1.0, 1.0, 1.0, 2.0, 5.0], 300))
+    gain = rng.normal(size=(3, 300))
+    noise = Noise(0.2, rho, 9)
+    np.testing.assert_allclose(noise.through(gain, steps), gain @ noise.covariance(steps) @ gain.T, rtol=1e-10)
+
+
+def test_known_autoregression_as_generalised_least_squares_has_it(rng):
+    """statsmodels' GLS of y = mean with the same covariance: its own sandwich of OLS weights, (X'X)^-1 X'SX (X'X)^-1."""
+    steps = np.arange(80.0)
+    sigma = Noise(0.3, 0.6, 9).covariance(steps)
+    rows = np.vander(np.linspace(-1, 1, 80), 3, increasing=True)
+    fit = fit_linear(rows, rng.normal(size=80), steps, Noise(0.3, 0.6, 9))
+    best = sm.GLS(rng.normal(size=80), rows, sigma=sigma).fit()
+    ols, gls = np.diag(fit.covariance), np.diag(best.normalized_cov_params)
+    assert np.all(ols >= gls * (1 - 1e-9))  # Gauss-Markov: no linear estimate is better than GLS
+    assert np.all(ols < 1.2 * gls)  # and plain least squares loses little here
+
+
 @pytest.mark.parametrize(("rho", "factor"), [(0.5, 2.96), (0.8, 8.60)])
 def test_variance_of_a_mean_grows_as_for_an_autoregression(rho, factor):
     """(1 + r)/(1 - r) for many; for n = 100 exactly 2.96 and 8.60 (computed from the closed form)."""

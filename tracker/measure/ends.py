@@ -245,11 +245,16 @@ def _table(stage: Stage, follow: EndFollow, track: Track) -> pd.DataFrame:
     table.loc[at, "end_x_m"] = track.x_m
     table.loc[at, "end_z_m"] = track.z_m
     table.loc[at, "u_end_z_m"] = track.u_m
-    table.loc[at, "flags"] = [" ".join(flags) for flags in follow.flags]
+    table.loc[at, "flags"] = [" ".join(_faults(flags)) for flags in follow.flags]
     speed, u_speed = _speeds(track)
     table.loc[at, "line_speed_mps"] = speed
     table.loc[at, "u_line_speed_mps"] = u_speed
     return table
+
+
+def _faults(flags: tuple[str, ...]) -> tuple[str, ...]:
+    """Flags that a person should look at: an end that hangs still before its release is as it should be."""
+    return tuple(flag for flag in flags if flag != "end-still")
 
 
 UNRESOLVED = 0.5  # of the mean speed: a change of the velocity from one frame to the next that no smoothing may hide
@@ -304,5 +309,5 @@ def _marks(stage: Stage, follow: EndFollow) -> tuple[FrameMark, ...]:
     marks = []
     for frame, point, flags in zip(follow.frame, follow.raw_px, follow.flags, strict=True):
         end = (float(point[0]), float(point[1])) if np.isfinite(point).all() else None
-        marks.append(FrameMark(int(frame), float(stage.clock.frame_s[frame]), end_px=end, flags=tuple(flags)))
+        marks.append(FrameMark(int(frame), float(stage.clock.frame_s[frame]), end_px=end, flags=_faults(flags)))
     return tuple(marks)

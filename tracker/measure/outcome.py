@@ -106,13 +106,13 @@ def predicted(
     -------
     Prediction
     """
-    difference = measured.value - value
+    difference, unit = measured.value - value, measured.unit.replace("m/s2", "m/s²")
     u_difference = float(np.sqrt(max(measured.u**2 + u**2 - 2 * cancelled, 0.0)))
     reach = measured.k * u_difference
     relative = f" ({100 * difference / value:+.2f} %)" if value else ""
     if abs(difference) <= reach:
-        says = f"The {label} agrees with {law} within U: {difference:+.3g} {measured.unit}{relative} against {reach:.2g} {measured.unit}."
+        says = f"The {label} agrees with {law} within U: {difference:+.3g} {unit}{relative} against {reach:.2g} {unit}."
     else:
         side = "above" if difference > 0 else "below"
-        says = f"The {label} lies {abs(difference):.3g} {measured.unit}{relative} {side} {law}, more than U of {reach:.2g} {measured.unit}."
+        says = f"The {label} lies {abs(difference):.3g} {unit}{relative} {side} {law}, more than U of {reach:.2g} {unit}."
     return Prediction(name, law, value, u, measured.unit, difference, u_difference, says)

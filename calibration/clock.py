@@ -772,6 +772,8 @@ def _leaps(place: Array, reach: int = 4) -> tuple[NDArray[np.int64], NDArray[np.
         near = [k for k in range(max(0, i - reach), min(len(step), i + reach + 1)) if k != i and np.isfinite(step[k]).all()]
         if len(near) < 4 or not np.isfinite(step[i]).all():
             continue
+        if near[1] > i or near[-2] < i:  # from one side alone, a motion that speeds up looks like one that leaps
+            continue
         usual = np.median(step[near], axis=0)
         size = float(np.hypot(*usual))
         scatter = 1.4826 * float(np.median(np.hypot(*(step[near] - usual).T)))

@@ -15,6 +15,7 @@ from tracker.analysis.tracks import Evaluation, PayoutTrack
 from tracker.follow.payout import PayoutFollow, PayoutFrame, follow_payout
 from tracker.measure.outcome import HEADLINE, HEADLINE_WORDS, Outcome, empty_frames, notices_of, predicted, push
 from tracker.measure.stage import Stage
+from tracker.measure.steps import REPEATED, StepWatch, repeat_notice
 from tracker.measure.views import InputU, View, causes_of, first_view
 from tracker.progress import Progress
 from tracker.result import FrameMark, Prediction
@@ -59,11 +60,13 @@ def measure_arc(stage: Stage, tell: Progress) -> Outcome:
     """
     kind = stage.file.sheet.test.kind
     total = stage.end_frame - stage.first_frame
+    watch = StepWatch(stage.clip.frames(stage.first_frame, stage.end_frame))
     follow = follow_payout(
-        stage.clip.frames(stage.first_frame, stage.end_frame), stage.background, stage.plane, stage.clock, stage.hints,
+        watch, stage.background, stage.plane, stage.clock, stage.hints,
         shake=stage.shake, progress=lambda index: tell("following the line", index - stage.first_frame + 1, total),
     )  # fmt: skip
     _refuse_unseen(stage, follow)
+    repeated = watch.repeated()
     tell("uncertainty", 0, 0)
     seen = _seen(stage, follow)
     view = first_view(stage, _inputs(stage))
@@ -84,8 +87,8 @@ def measure_arc(stage: Stage, tell: Progress) -> Outcome:
     return Outcome(
         quantities=quantities,
         predictions=_predictions(stage, quantities),
-        notices=(*follow.notices, *notices_of(best), *_mark_notice(stage, follow)),
-        frames=_table(stage, follow, track),
+        notices=(*follow.notices, *_repeats(stage, follow, repeated), *notices_of(best), *_mark_notice(stage, follow)),
+        frames=_table(stage, follow, track, repeated),
         marks=_marks(stage, follow),
         curves=best.curves,
         absent=best.absent,
@@ -120,6 +123,12 @@ def _refuse_headless(stage: Stage, kind: str, best: Evaluation, follow: PayoutFo
         "Put tape marks on the line at a known spacing (line.mark_spacing_m), or film faster with a shorter exposure.",
         "headline-absent",
     )
+
+
+def _repeats(stage: Stage, follow: PayoutFollow, repeated: NDArray[np.intp]) -> tuple[Notice, ...]:
+    speeds = follow.speed.v_mps
+    fastest = float(np.nanmax(speeds)) if np.isfinite(speeds).any() else np.nan
+    return repeat_notice(stage.file.clip_path.name, stage.clock, repeated, fastest)
 
 
 def _inputs(stage: Stage) -> dict[str, float]:
@@ -271,7 +280,7 @@ def _scale_shifts(stage: Stage) -> list[float]:
     return [here / stage.plane.shifted(i).scale_px_per_m() for i in range(len(stage.plane.sources))]
 
 
-def _table(stage: Stage, follow: PayoutFollow, track: PayoutTrack) -> pd.DataFrame:
+def _table(stage: Stage, follow: PayoutFollow, track: PayoutTrack, repeated: NDArray[np.intp]) -> pd.DataFrame:
     table = empty_frames(np.arange(stage.first_frame, stage.end_frame))
     at = np.array([frame.frame for frame in follow.frames]) - stage.first_frame
     table["t_s"] = stage.clock.frame_s[stage.first_frame : stage.end_frame]
@@ -283,7 +292,8 @@ def _table(stage: Stage, follow: PayoutFollow, track: PayoutTrack) -> pd.DataFra
     table.loc[at, "line_speed_mps"] = track.speed_mps
     table.loc[at, "u_line_speed_mps"] = np.where(np.isfinite(track.speed_mps), track.u_speed_mps, np.nan)
     table.loc[at, "paid_out_m"] = track.paid_out_m
-    table.loc[at, "flags"] = [" ".join(frame.flags) for frame in follow.frames]
+    flags = [(*frame.flags, REPEATED) if frame.frame in repeated else frame.flags for frame in follow.frames]
+    table.loc[at, "flags"] = [" ".join(each) for each in flags]
     return table
 
 

@@ -16,6 +16,7 @@ from tracker.analysis.tracks import Evaluation, Track
 from tracker.follow.end import EndFollow, follow_end
 from tracker.measure.outcome import HEADLINE, HEADLINE_WORDS, Outcome, empty_frames, notices_of, predicted, push
 from tracker.measure.stage import Stage
+from tracker.measure.steps import StepWatch, lost_notice, repeat_notice, without_repeats
 from tracker.measure.views import InputU, View, causes_of, first_view
 from tracker.progress import Progress
 from tracker.result import FrameMark, Prediction
@@ -52,12 +53,14 @@ def measure_end(stage: Stage, tell: Progress) -> Outcome:
     """
     kind = stage.file.sheet.test.kind
     total = stage.end_frame - stage.first_frame
-    frames = stage.clip.frames(stage.first_frame, stage.end_frame)
+    watch = StepWatch(stage.clip.frames(stage.first_frame, stage.end_frame))
     follow = follow_end(
-        frames, stage.background, stage.plane, stage.clock, stage.hints, shake=stage.shake,
+        watch, stage.background, stage.plane, stage.clock, stage.hints, shake=stage.shake,
         progress=lambda index: tell("following the end", index - stage.first_frame + 1, total),
     )  # fmt: skip
     _refuse_unseen(stage, follow)
+    repeated = watch.repeated()
+    follow = without_repeats(follow, repeated)
     tell("uncertainty", 0, 0)
     view = first_view(stage, _inputs(stage))
     track = _track(follow, view, None)
@@ -83,7 +86,7 @@ def measure_end(stage: Stage, tell: Progress) -> Outcome:
     return Outcome(
         quantities=quantities,
         predictions=predictions,
-        notices=(*follow.notices, *notices_of(best), *_drop_check(kind, quantities, predictions)),
+        notices=(*follow.notices, *_step_notices(stage, follow, repeated), *notices_of(best), *_drop_check(kind, quantities, predictions)),
         frames=_table(stage, follow, track),
         marks=_marks(stage, follow),
         curves=best.curves,
@@ -107,6 +110,15 @@ def _refuse_unseen(stage: Stage, follow: EndFollow) -> None:
             "Film the release and the fall, or check datum.origin_px (the release point) and clip.window_s.",
             "nothing-falls",
         )
+
+
+def _step_notices(stage: Stage, follow: EndFollow, repeated: NDArray[np.intp]) -> tuple[Notice, ...]:
+    name, speeds = stage.file.clip_path.name, follow.speed_px_s / stage.plane.scale_px_per_m()
+    fastest = float(np.nanmax(speeds)) if np.isfinite(speeds).any() else np.nan
+    return (
+        *repeat_notice(name, stage.clock, repeated, fastest),
+        *lost_notice(name, stage.clock, follow, fastest),
+    )
 
 
 def _inputs(stage: Stage) -> dict[str, float]:
